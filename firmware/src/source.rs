@@ -1,0 +1,59 @@
+//! Where sample pairs come from: the first of the two hardware traits.
+
+use legwise_protocol::message::LegScale;
+
+/// What a source is, as far as the pipeline must know. Constant while the source lives.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct SourceDescription {
+    /// Pairs per second, in millihertz.
+    pub sample_rate_mhz: u64,
+    /// How much later than leg A leg B is sampled; 0 for simultaneous sampling. Less than one
+    /// sample period in magnitude.
+    pub skew_ns: i32,
+    /// How codes become microvolts, leg A then leg B.
+    pub legs: [LegScale; 2],
+}
+
+/// What a call to [`PairSource::take`] brought.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Taken {
+    /// No pair is ready yet; ask again.
+    Nothing,
+    /// Pairs were written to the front of both buffers.
+    Pairs {
+        /// Index of the first. A jump past the last index plus the last count is a gap.
+        first_sample: u64,
+        /// How many, at most the length of the buffers.
+        pairs: usize,
+        /// Whether pairs were lost since the call before because they were not taken in time.
+        is_overrun: bool,
+    },
+    /// There will be no more pairs.
+    Finished,
+}
+
+/// A source of sample pairs: a dual converter, an external converter, a recording, a simulated line.
+///
+/// # For driver authors
+/// * Pairs are numbered from the start of sampling by a 64-bit index that counts *every* sampling
+///   instant, taken away or not: the index is the clock of everything downstream.
+/// * `take` never waits. Called at least once per half of the sampling buffer, it must not lose pairs;
+///   when it does, the next call says `is_overrun` and jumps the index by the number lost.
+/// * Both legs of a pair belong to the same index. A leg sampled later says so by `skew_ns`.
+/// * Codes are raw: do not calibrate, filter or clip them.
+///
+/// # For callers
+/// Both buffers must have the same length; a source writes the same number of codes to each.
+pub trait PairSource {
+    /// What can go wrong.
+    type Error: core::fmt::Debug;
+
+    /// What this source is.
+    fn describe(&self) -> SourceDescription;
+
+    /// Fetches pairs into the front of `leg_a` and `leg_b`.
+    ///
+    /// # Errors
+    /// When the hardware or the recording fails; the caller may try again.
+    fn take(&mut self, leg_a: &mut [i32], leg_b: &mut [i32]) -> Result<Taken, Self::Error>;
+}
