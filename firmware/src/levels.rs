@@ -1,0 +1,242 @@
+//! Signal levels: where the differential mode rests, and where it is driven to.
+//!
+//! A bus has three states, not two: driven high, driven low, and resting at its bias level between
+//! messages. Levels are modes of a fixed-range histogram (after the histogram method of IEEE Std 181,
+//! with the resting state kept apart), refined by the mean of the five bins around the mode. Means of
+//! whole classes are pulled tens of millivolts by edge samples; modes are not.
+//!
+//! Each bin holds a count and the sum of its samples' offsets within the bin (in steps of 16 µV), so
+//! a refined level is good to 16 µV however coarse the bins. The common mode is summed per state over
+//! *settled* samples: those whose predecessor was in the same state.
+
+use crate::block::Block;
+use legwise_protocol::message::{Level, Levels, Plateau};
+
+const BINS: usize = 1024;
+/// Bin width as a power of two: 16.384 mV, ±8.39 V in all.
+const BIN_SHIFT: u32 = 14;
+/// Steps of the offset within a bin: 2^4 µV.
+const OFFSET_SHIFT: u32 = 4;
+/// Range of the histogram; what lies beyond counts in the outermost bins.
+const RANGE_UV: i32 = (BINS as i32 / 2) << BIN_SHIFT;
+const OFFSET_MASK: i32 = (1 << BIN_SHIFT) - 1;
+/// Bins either side of the mode that belong to a level.
+const AROUND: usize = 2;
+/// Two levels are told apart from 0.4 V on.
+const APART_BINS: usize = 400_000 >> BIN_SHIFT;
+/// A level in the resting region must hold this share of all samples, in a thousand.
+const LEAST_IDLE_PER_MILLE: u32 = 10;
+/// A driven region must hold this share of all samples, in a thousand ...
+const LEAST_DRIVEN_PER_MILLE: u32 = 5;
+/// ... and its mode this share of the region, in a thousand: scattered noise has no mode.
+const LEAST_MODE_PER_MILLE: u32 = 100;
+/// A second level on one side must hold this share of all samples, in a thousand.
+const LEAST_SECOND_PER_MILLE: u32 = 50;
+
+const _: () = assert!(
+    (crate::settings::LONGEST_LEVELS_SAMPLES as u64) << (BIN_SHIFT - OFFSET_SHIFT) <= 1 << 32,
+    "an offset sum must not overflow within the longest interval"
+);
+
+/// State of one sample, also the index of its sums.
+const IDLE: usize = 0;
+const HIGH: usize = 1;
+const LOW: usize = 2;
+
+/// Histogram and sums of one interval.
+#[derive(Debug)]
+pub struct LevelMeter {
+    first_sample: u64,
+    samples: u32,
+    counts: [u32; BINS],
+    offsets: [u32; BINS],
+    state: usize,
+    settled: [u32; 3],
+    twice_cm_sums: [i64; 3],
+}
+
+impl Default for LevelMeter {
+    fn default() -> Self {
+        Self {
+            first_sample: 0,
+            samples: 0,
+            counts: [0; BINS],
+            offsets: [0; BINS],
+            state: IDLE,
+            settled: [0; 3],
+            twice_cm_sums: [0; 3],
+        }
+    }
+}
+
+impl LevelMeter {
+    /// Samples in the interval so far.
+    pub const fn samples(&self) -> u32 {
+        self.samples
+    }
+
+    /// Takes a block; |DM| up to `idle_below_uv` is the resting state.
+    pub fn take(&mut self, block: &Block<'_>, idle_below_uv: u32) {
+        if self.samples == 0 {
+            self.first_sample = block.first_sample;
+        }
+        let threshold = i32::try_from(idle_below_uv).unwrap_or(i32::MAX);
+        let mut state = self.state;
+        for (&dm, &twice_cm) in block.dm.iter().zip(block.twice_cm) {
+            let bounded = dm.clamp(-RANGE_UV, RANGE_UV - 1);
+            let bin = ((bounded >> BIN_SHIFT) + BINS as i32 / 2) as usize;
+            if let (Some(count), Some(offset)) = (self.counts.get_mut(bin), self.offsets.get_mut(bin)) {
+                *count = count.wrapping_add(1);
+                *offset = offset.wrapping_add(((bounded & OFFSET_MASK) >> OFFSET_SHIFT) as u32);
+            }
+            let now = usize::from(dm > threshold) | usize::from(dm < -threshold) << 1;
+            if now == state {
+                if let (Some(settled), Some(sum)) =
+                    (self.settled.get_mut(now), self.twice_cm_sums.get_mut(now))
+                {
+                    *settled = settled.wrapping_add(1);
+                    *sum += i64::from(twice_cm);
+                }
+            }
+            state = now;
+        }
+        self.state = state;
+        self.samples = self.samples.saturating_add(block.pairs() as u32);
+    }
+
+    /// The levels of the interval, and a fresh start.
+    pub fn finish(&mut self, idle_below_uv: u32) -> Levels {
+        let levels = self.evaluate(idle_below_uv);
+        *self = Self { state: self.state, ..Self::default() };
+        levels
+    }
+
+    fn evaluate(&self, idle_below_uv: u32) -> Levels {
+        let centre = BINS / 2;
+        let reach = ((idle_below_uv >> BIN_SHIFT) as usize).clamp(1, centre - 1);
+        let mut idle = self
+            .mode(centre - reach, centre + reach, None)
+            .filter(|mode| self.is_share(mode.held, LEAST_IDLE_PER_MILLE));
+        let mut high = self.driven(centre + reach, BINS);
+        let mut low = self.driven(0, centre - reach);
+        if idle.is_none() {
+            // A strongly biased pair rests beyond the threshold: then one side shows two levels.
+            for side in [&mut high, &mut low] {
+                let Some((driven, second)) = side.and_then(|mode| Some((mode, self.second(mode)?))) else {
+                    continue;
+                };
+                let (outer, inner) =
+                    if driven.distance() >= second.distance() { (driven, second) } else { (second, driven) };
+                *side = Some(outer);
+                idle = Some(inner);
+                break;
+            }
+        }
+        let [idle_cm, high_cm, low_cm] = [IDLE, HIGH, LOW].map(|state| self.plateau(state));
+        Levels {
+            first_sample: self.first_sample,
+            samples: self.samples,
+            idle: idle.map(|mode| self.level(mode)),
+            driven_high: high.map(|mode| self.level(mode)),
+            driven_low: low.map(|mode| self.level(mode)),
+            mid_samples: self.mid_samples(idle, high) + self.mid_samples(idle, low),
+            idle_cm,
+            high_cm,
+            low_cm,
+        }
+    }
+
+    /// The mode of a region that is driven often enough and not scattered.
+    fn driven(&self, from: usize, to: usize) -> Option<Mode> {
+        let region = sum(self.counts.get(from..to)?);
+        if !self.is_share(region, LEAST_DRIVEN_PER_MILLE) {
+            return None;
+        }
+        let mode = self.mode(from, to, None)?;
+        (u64::from(mode.held) * 1000 >= u64::from(region) * u64::from(LEAST_MODE_PER_MILLE)).then_some(mode)
+    }
+
+    /// A second level on the same side as `first`, at least 0.4 V away from it.
+    fn second(&self, first: Mode) -> Option<Mode> {
+        let centre = BINS / 2;
+        let (from, to) = if first.bin >= centre { (centre, BINS) } else { (0, centre) };
+        self.mode(from, to, Some(first)).filter(|mode| self.is_share(mode.held, LEAST_SECOND_PER_MILLE))
+    }
+
+    /// The bin of `from..to` around which most samples lie; bins near `apart_from` do not count.
+    fn mode(&self, from: usize, to: usize, apart_from: Option<Mode>) -> Option<Mode> {
+        let mut best = Mode { bin: 0, held: 0 };
+        for bin in from..to {
+            if apart_from.is_some_and(|other| bin.abs_diff(other.bin) < APART_BINS) {
+                continue;
+            }
+            let held = sum(self.around(bin, &self.counts));
+            let is_taller = |bin: usize| self.counts.get(bin).copied().unwrap_or(0);
+            if held > best.held || held == best.held && is_taller(bin) > is_taller(best.bin) {
+                best = Mode { bin, held };
+            }
+        }
+        (best.held > 0).then_some(best)
+    }
+
+    fn around<'a>(&self, bin: usize, values: &'a [u32; BINS]) -> &'a [u32] {
+        values.get(bin.saturating_sub(AROUND)..(bin + AROUND + 1).min(BINS)).unwrap_or(&[])
+    }
+
+    /// Mean of the samples around a mode.
+    fn level(&self, mode: Mode) -> Level {
+        let first_bin = mode.bin.saturating_sub(AROUND) as i64 - BINS as i64 / 2;
+        let (mut total, mut held) = (0_i64, 0_i64);
+        let bins = self.around(mode.bin, &self.counts).iter().zip(self.around(mode.bin, &self.offsets));
+        for (number, (&count, &offset)) in bins.enumerate() {
+            let base = (first_bin + number as i64) << BIN_SHIFT;
+            total += i64::from(count) * base + (i64::from(offset) << OFFSET_SHIFT);
+            held += i64::from(count);
+        }
+        // Offsets were cut to 16 µV: on average 7.5 µV too low.
+        let mean = total.checked_div_euclid(held).unwrap_or(0) + 7;
+        Level { dm_uv: mean.clamp(i64::from(i32::MIN), i64::from(i32::MAX)) as i32, samples: mode.held }
+    }
+
+    /// Samples between 0.3 and 0.7 of a driven level, those near the resting level left out.
+    fn mid_samples(&self, idle: Option<Mode>, driven: Option<Mode>) -> u32 {
+        let Some(driven) = driven else { return 0 };
+        let distance = driven.distance();
+        (distance * 3 / 10..=distance * 7 / 10)
+            .map(
+                |away| if driven.bin >= BINS / 2 { BINS / 2 + away } else { (BINS / 2).saturating_sub(away) },
+            )
+            .filter(|bin| idle.is_none_or(|idle| bin.abs_diff(idle.bin) > 3 * AROUND))
+            .map(|bin| self.counts.get(bin).copied().unwrap_or(0))
+            .fold(0, u32::saturating_add)
+    }
+
+    fn plateau(&self, state: usize) -> Plateau {
+        let samples = self.settled.get(state).copied().unwrap_or(0);
+        let total = self.twice_cm_sums.get(state).copied().unwrap_or(0);
+        let mean = total.checked_div_euclid(i64::from(samples)).unwrap_or(0);
+        Plateau { samples, twice_cm_uv: mean as i32 }
+    }
+
+    fn is_share(&self, held: u32, per_mille: u32) -> bool {
+        held > 0 && u64::from(held) * 1000 >= u64::from(self.samples) * u64::from(per_mille)
+    }
+}
+
+/// A bin and the samples within two bins of it.
+#[derive(Clone, Copy, Debug)]
+struct Mode {
+    bin: usize,
+    held: u32,
+}
+
+impl Mode {
+    /// Bins away from 0 V.
+    const fn distance(self) -> usize {
+        self.bin.abs_diff(BINS / 2)
+    }
+}
+
+fn sum(counts: &[u32]) -> u32 {
+    counts.iter().copied().fold(0, u32::saturating_add)
+}

@@ -1,0 +1,297 @@
+//! The whole device: source, pipeline, outbox, link and alarm, one step at a time.
+//!
+//! A board calls [`Monitor::step`] from its main loop. Nothing in it waits.
+
+use crate::alarm::AlarmPin;
+use crate::block::BLOCK_PAIRS;
+use crate::link::Link;
+use crate::outbox::Outbox;
+use crate::pipeline::Pipeline;
+use crate::settings;
+use crate::source::{PairSource, SourceDescription, Taken};
+use embedded_hal::digital::OutputPin;
+use legwise_protocol::WIRE_VERSION;
+use legwise_protocol::bytes::Bytes;
+use legwise_protocol::command::{Command, Request};
+use legwise_protocol::decoder::RequestDecoder;
+use legwise_protocol::framing::DEVICE_FRAME_BYTES;
+use legwise_protocol::message::{
+    EndCause, GapCause, Hello, Message, NAME_BYTES, Outcome, Reply, ResetCause, Settings,
+};
+
+/// Who a device is.
+#[derive(Clone, Copy, Debug)]
+pub struct Identity {
+    /// Drawn anew at each start.
+    pub boot_id: u32,
+    /// Name of the board.
+    pub board: &'static str,
+    /// Serial number; 0 when it has none.
+    pub serial: u64,
+    /// Why it started.
+    pub reset_cause: ResetCause,
+}
+
+/// What a step did.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Step {
+    /// Pairs were taken or bytes moved.
+    Worked,
+    /// Nothing to do right now: the board may sleep until the next interrupt.
+    Waiting,
+    /// The source has ended and everything has been sent.
+    Finished,
+}
+
+/// What failed in a step; the next step may be tried.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum StepError<S, L, P> {
+    /// The source.
+    Source(S),
+    /// The link.
+    Link(L),
+    /// The alarm pin.
+    Pin(P),
+}
+
+impl<S: core::fmt::Debug, L: core::fmt::Debug, P: core::fmt::Debug> core::fmt::Display
+    for StepError<S, L, P>
+{
+    fn fmt(&self, f: &mut core::fmt::Formatter<'_>) -> core::fmt::Result {
+        match self {
+            Self::Source(error) => write!(f, "could not take samples: {error:?}"),
+            Self::Link(error) => write!(f, "could not use the link: {error:?}"),
+            Self::Pin(error) => write!(f, "could not drive the alarm pin: {error:?}"),
+        }
+    }
+}
+
+/// The device. `KEPT` and `PASSING` are the sizes of the outbox in bytes.
+#[derive(Debug)]
+pub struct Monitor<S, L, P, const KEPT: usize, const PASSING: usize> {
+    identity: Identity,
+    description: SourceDescription,
+    source: S,
+    link: L,
+    alarm: AlarmPin<P>,
+    pipeline: Pipeline,
+    outbox: Outbox<KEPT, PASSING>,
+    requests: RequestDecoder,
+    frame: [u8; DEVICE_FRAME_BYTES],
+    frame_length: usize,
+    frame_sent: usize,
+    code_a: [i32; BLOCK_PAIRS],
+    code_b: [i32; BLOCK_PAIRS],
+    is_stopped: bool,
+    is_ended: bool,
+}
+
+impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usize>
+    Monitor<S, L, P, KEPT, PASSING>
+{
+    /// A device that starts to examine samples at its first step. It introduces itself at once.
+    pub fn new(identity: Identity, source: S, link: L, alarm: AlarmPin<P>, settings: Settings) -> Self {
+        let description = source.describe();
+        let mut monitor = Self {
+            identity,
+            description,
+            source,
+            link,
+            alarm,
+            pipeline: Pipeline::new(description, settings),
+            outbox: Outbox::new(identity.boot_id),
+            requests: RequestDecoder::new(),
+            frame: [0; DEVICE_FRAME_BYTES],
+            frame_length: 0,
+            frame_sent: 0,
+            code_a: [0; BLOCK_PAIRS],
+            code_b: [0; BLOCK_PAIRS],
+            is_stopped: false,
+            is_ended: false,
+        };
+        monitor.introduce();
+        let settings = Message::Settings(settings);
+        monitor.outbox.record(&settings, 0);
+        monitor
+    }
+
+    /// The outbox, to see what was shed or lost.
+    pub const fn outbox(&self) -> &Outbox<KEPT, PASSING> {
+        &self.outbox
+    }
+
+    /// The link.
+    pub const fn link_mut(&mut self) -> &mut L {
+        &mut self.link
+    }
+
+    /// The source.
+    pub const fn source(&self) -> &S {
+        &self.source
+    }
+
+    /// Takes commands, takes at most one block of pairs, sends what the link will take.
+    ///
+    /// # Errors
+    /// When source, link or pin fail. State stays sound; step again.
+    pub fn step(&mut self) -> Result<Step, StepError<S::Error, L::Error, P::Error>> {
+        let has_received = self.receive().map_err(StepError::Link)?;
+        let has_sampled = self.sample()?;
+        let has_sent = self.send().map_err(StepError::Link)?;
+        Ok(if has_received || has_sampled || has_sent {
+            Step::Worked
+        } else if self.is_ended && self.outbox.is_sent() && self.frame_sent == self.frame_length {
+            Step::Finished
+        } else {
+            Step::Waiting
+        })
+    }
+
+    /// Takes samples if there are any; `true` when something was done.
+    fn sample(&mut self) -> Result<bool, StepError<S::Error, L::Error, P::Error>> {
+        if self.is_ended {
+            return Ok(false);
+        }
+        let taken = self.source.take(&mut self.code_a, &mut self.code_b).map_err(StepError::Source)?;
+        let Self { pipeline, outbox, .. } = self;
+        let records = &mut |message: &Message, sample: u64| outbox.record(message, sample);
+        match taken {
+            Taken::Nothing => return Ok(false),
+            Taken::Pairs { .. } if self.is_stopped => return Ok(true),
+            Taken::Pairs { first_sample, pairs, is_overrun } => {
+                let cause = if is_overrun { GapCause::Overrun } else { GapCause::Skipped };
+                let code_a = self.code_a.get(..pairs).unwrap_or(&self.code_a);
+                let code_b = self.code_b.get(..pairs).unwrap_or(&self.code_b);
+                if is_overrun && first_sample == pipeline.next_sample() {
+                    pipeline.gap(first_sample, 0, cause, records);
+                }
+                pipeline.take(first_sample, code_a, code_b, cause, records);
+            }
+            Taken::Finished => {
+                self.is_ended = true;
+                if !self.is_stopped {
+                    pipeline.end(EndCause::SourceExhausted, records);
+                }
+            }
+        }
+        let is_outside = self.pipeline.take_alarm();
+        self.alarm.follow(is_outside, self.pipeline.next_sample()).map_err(StepError::Pin)?;
+        Ok(true)
+    }
+
+    fn send(&mut self) -> Result<bool, L::Error> {
+        let mut has_sent = false;
+        loop {
+            if self.frame_sent == self.frame_length {
+                self.frame_sent = 0;
+                self.frame_length = self.outbox.next_frame(&mut self.frame);
+            }
+            let waiting = self.frame.get(self.frame_sent..self.frame_length).unwrap_or(&[]);
+            if waiting.is_empty() {
+                return Ok(has_sent);
+            }
+            let taken = self.link.send(waiting)?.min(waiting.len());
+            if taken == 0 {
+                return Ok(has_sent);
+            }
+            self.frame_sent += taken;
+            has_sent = true;
+        }
+    }
+
+    fn receive(&mut self) -> Result<bool, L::Error> {
+        let mut buffer = [0; 64];
+        let received = self.link.receive(&mut buffer)?.min(buffer.len());
+        let mut decoder = core::mem::take(&mut self.requests);
+        decoder.feed_requests(buffer.get(..received).unwrap_or(&[]), |request| self.obey(&request));
+        self.requests = decoder;
+        Ok(received > 0)
+    }
+
+    fn obey(&mut self, request: &Request) {
+        let mut settings = *self.pipeline.settings();
+        let outcome = match request.command {
+            Command::Acknowledge { through } => return self.outbox.acknowledge(through),
+            Command::Identify => {
+                self.outbox.send_again();
+                self.introduce();
+                Outcome::Done
+            }
+            Command::WatchLimits { receiver, limits } => {
+                settings.receiver = receiver;
+                settings.limits = limits;
+                self.change(settings)
+            }
+            Command::SetDetection(detection) => {
+                settings.detection = detection;
+                self.change(settings)
+            }
+            Command::SetReporting(reporting) => {
+                settings.reporting = reporting;
+                self.change(settings)
+            }
+            Command::Start => self.start(),
+            Command::Stop => self.stop(),
+        };
+        let sample = self.pipeline.next_sample();
+        self.outbox.record(&Message::Reply(Reply { to: request.sequence, outcome }), sample);
+    }
+
+    fn change(&mut self, settings: Settings) -> Outcome {
+        if !settings::is_valid(&settings) {
+            return Outcome::OutOfRange;
+        }
+        let Self { pipeline, outbox, .. } = self;
+        pipeline.change(settings, &mut |message, sample| outbox.record(message, sample));
+        Outcome::Done
+    }
+
+    fn start(&mut self) -> Outcome {
+        if self.is_ended {
+            return Outcome::Unsupported;
+        }
+        self.is_stopped = false;
+        Outcome::Done
+    }
+
+    fn stop(&mut self) -> Outcome {
+        if !self.is_stopped && !self.is_ended {
+            self.is_stopped = true;
+            let Self { pipeline, outbox, .. } = self;
+            pipeline.end(EndCause::Stopped, &mut |message, sample| outbox.record(message, sample));
+        }
+        Outcome::Done
+    }
+
+    fn introduce(&mut self) {
+        let hello = Hello {
+            wire_version: WIRE_VERSION,
+            firmware_version: FIRMWARE_VERSION,
+            board: Bytes::<NAME_BYTES>::from_slice_cut(self.identity.board.as_bytes()),
+            serial: self.identity.serial,
+            reset_cause: self.identity.reset_cause,
+            sample_rate_mhz: self.description.sample_rate_mhz,
+            skew_ns: self.description.skew_ns,
+            legs: self.description.legs,
+        };
+        self.outbox.record(&Message::Hello(hello), self.pipeline.next_sample());
+    }
+}
+
+/// Version of this library, told in every `Hello`.
+const FIRMWARE_VERSION: (u16, u16, u16) = (
+    number(env!("CARGO_PKG_VERSION_MAJOR")),
+    number(env!("CARGO_PKG_VERSION_MINOR")),
+    number(env!("CARGO_PKG_VERSION_PATCH")),
+);
+
+/// A decimal number, read while the program is built.
+const fn number(text: &str) -> u16 {
+    let mut value = 0;
+    let mut rest = text.as_bytes();
+    while let [digit, after @ ..] = rest {
+        value = value * 10 + (*digit - b'0') as u16;
+        rest = after;
+    }
+    value
+}

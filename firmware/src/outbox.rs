@@ -1,0 +1,239 @@
+//! What waits to be sent: kept messages until they are acknowledged, passing ones until sent.
+//!
+//! ```text
+//!   record --> kept queue     [ sent, not acknowledged | not yet sent ]  forgotten when acknowledged
+//!          \-> passing queue  [ not yet sent ]                           forgotten when sent or shed
+//!                     both leave in the order they were made
+//! ```
+//!
+//! When the passing queue is full its oldest messages are shed, and each uses up a sequence number so
+//! that the host sees the loss. When the kept queue is nearly full, snippets are refused first; when
+//! it is full, other kept messages too. Both are counted and told in a kept `Loss` message as soon as
+//! there is room. Counts and extremes survive any of this: they are in `Totals`.
+
+use heapless::Deque;
+use legwise_protocol::framing::{self, Delivery, Envelope, MESSAGE_BYTES};
+use legwise_protocol::message::{Loss, Message};
+
+/// Messages a queue holds at most, whatever their size.
+const MOST_MESSAGES: usize = 256;
+
+/// A message in a queue.
+#[derive(Clone, Copy, Debug)]
+struct Entry {
+    start: usize,
+    length: usize,
+    /// Counts every message made.
+    order: u32,
+    sample: u64,
+}
+
+/// A queue of byte strings in a ring of `N` bytes.
+#[derive(Debug)]
+struct ByteQueue<const N: usize> {
+    ring: [u8; N],
+    entries: Deque<Entry, MOST_MESSAGES>,
+    used: usize,
+}
+
+impl<const N: usize> ByteQueue<N> {
+    const fn new() -> Self {
+        Self { ring: [0; N], entries: Deque::new(), used: 0 }
+    }
+
+    const fn room(&self) -> usize {
+        N - self.used
+    }
+
+    fn is_open_for(&self, length: usize) -> bool {
+        self.room() >= length && !self.entries.is_full()
+    }
+
+    fn push(&mut self, bytes: &[u8], order: u32, sample: u64) -> bool {
+        if !self.is_open_for(bytes.len()) || N == 0 {
+            return false;
+        }
+        let start = self.entries.back().map_or(0, |last| (last.start + last.length) % N);
+        for (offset, &byte) in bytes.iter().enumerate() {
+            if let Some(slot) = self.ring.get_mut((start + offset) % N) {
+                *slot = byte;
+            }
+        }
+        self.used += bytes.len();
+        self.entries.push_back(Entry { start, length: bytes.len(), order, sample }).is_ok()
+    }
+
+    fn pop(&mut self) -> bool {
+        match self.entries.pop_front() {
+            Some(entry) => {
+                self.used -= entry.length.min(self.used);
+                true
+            }
+            None => false,
+        }
+    }
+
+    /// Copies an entry's bytes to `out`; the part of `out` that was written.
+    fn read<'a>(&self, entry: &Entry, out: &'a mut [u8]) -> &'a [u8] {
+        let out = out.get_mut(..entry.length).unwrap_or(&mut []);
+        for (offset, byte) in out.iter_mut().enumerate() {
+            *byte = self.ring.get((entry.start + offset) % N.max(1)).copied().unwrap_or(0);
+        }
+        out
+    }
+}
+
+/// The two queues and the numbers that go with them. `KEPT` and `PASSING` are bytes.
+#[derive(Debug)]
+pub struct Outbox<const KEPT: usize, const PASSING: usize> {
+    boot_id: u32,
+    sequence: u32,
+    order: u32,
+    kept: ByteQueue<KEPT>,
+    passing: ByteQueue<PASSING>,
+    /// Number of the oldest kept message still held.
+    first_kept_number: u32,
+    /// Kept messages at the front that have been sent.
+    kept_sent: usize,
+    loss: Loss,
+    told_loss: Loss,
+    shed: u32,
+}
+
+impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
+    /// Room that snippets leave for other kept messages.
+    const RESERVE: usize = KEPT / 4;
+
+    /// An empty outbox for one boot.
+    pub const fn new(boot_id: u32) -> Self {
+        const { assert!(KEPT >= 2 * MESSAGE_BYTES && PASSING >= 2 * MESSAGE_BYTES) };
+        Self {
+            boot_id,
+            sequence: 0,
+            order: 0,
+            kept: ByteQueue::new(),
+            passing: ByteQueue::new(),
+            first_kept_number: 1,
+            kept_sent: 0,
+            loss: Loss { snippet_parts: 0, records: 0 },
+            told_loss: Loss { snippet_parts: 0, records: 0 },
+            shed: 0,
+        }
+    }
+
+    /// Passing messages shed so far.
+    pub const fn shed(&self) -> u32 {
+        self.shed
+    }
+
+    /// Kept messages given up so far.
+    pub const fn loss(&self) -> Loss {
+        self.loss
+    }
+
+    /// Whether every message has been sent (kept ones may still await acknowledgement).
+    pub fn is_sent(&self) -> bool {
+        self.passing.entries.is_empty() && self.kept_sent >= self.kept.entries.len()
+    }
+
+    /// Takes a message made when the source had delivered `sample` pairs.
+    pub fn record(&mut self, message: &Message, sample: u64) {
+        self.tell_loss(sample);
+        let mut buffer = [0; MESSAGE_BYTES];
+        let Ok(bytes) = framing::encode_message(message, &mut buffer) else { return };
+        self.order = self.order.wrapping_add(1);
+        if message.is_kept() {
+            self.record_kept(message, bytes, sample);
+        } else {
+            self.record_passing(bytes, sample);
+        }
+    }
+
+    /// Forgets kept messages up to and including number `through`.
+    pub fn acknowledge(&mut self, through: u32) {
+        // Numbers that were never sent cannot have been stored: ignore them.
+        let sent_end = self.first_kept_number.wrapping_add(self.kept_sent as u32);
+        let count = through.wrapping_sub(self.first_kept_number).wrapping_add(1);
+        if count > sent_end.wrapping_sub(self.first_kept_number) {
+            return;
+        }
+        for _ in 0..count {
+            if self.kept.pop() {
+                self.first_kept_number = self.first_kept_number.wrapping_add(1);
+                self.kept_sent = self.kept_sent.saturating_sub(1);
+            }
+        }
+    }
+
+    /// Sends every kept message again that was not acknowledged: the host is new or was away.
+    pub fn send_again(&mut self) {
+        self.kept_sent = 0;
+    }
+
+    /// Writes the next frame into `out` and returns its length; 0 when nothing waits.
+    /// `out` must hold [`framing::DEVICE_FRAME_BYTES`].
+    pub fn next_frame(&mut self, out: &mut [u8]) -> usize {
+        let kept = self.kept.entries.iter().nth(self.kept_sent).copied();
+        let passing = self.passing.entries.front().copied();
+        let mut buffer = [0; MESSAGE_BYTES];
+        let (entry, delivery, message) = match (kept, passing) {
+            (None, None) => return 0,
+            (Some(kept), passing) if passing.is_none_or(|passing| is_before(kept.order, passing.order)) => {
+                let number = self.first_kept_number.wrapping_add(self.kept_sent as u32);
+                self.kept_sent += 1;
+                (kept, Delivery::Kept { number }, self.kept.read(&kept, &mut buffer))
+            }
+            (_, Some(passing)) => {
+                let message = self.passing.read(&passing, &mut buffer);
+                self.passing.pop();
+                (passing, Delivery::Passing, message)
+            }
+            (Some(_), None) => return 0,
+        };
+        let envelope =
+            Envelope { boot_id: self.boot_id, sequence: self.sequence, sample: entry.sample, delivery };
+        self.sequence = self.sequence.wrapping_add(1);
+        framing::frame_message(&envelope, message, out).unwrap_or(0)
+    }
+
+    fn record_kept(&mut self, message: &Message, bytes: &[u8], sample: u64) {
+        let is_snippet = matches!(message, Message::Snippet(_));
+        let needed = bytes.len() + if is_snippet { Self::RESERVE } else { 0 };
+        if self.kept.is_open_for(needed) && self.kept.push(bytes, self.order, sample) {
+            return;
+        }
+        let lost = if is_snippet { &mut self.loss.snippet_parts } else { &mut self.loss.records };
+        *lost = lost.saturating_add(1);
+    }
+
+    fn record_passing(&mut self, bytes: &[u8], sample: u64) {
+        while !self.passing.is_open_for(bytes.len()) {
+            if !self.passing.pop() {
+                return;
+            }
+            self.shed = self.shed.saturating_add(1);
+            self.sequence = self.sequence.wrapping_add(1);
+        }
+        self.passing.push(bytes, self.order, sample);
+    }
+
+    /// Puts the account of lost kept messages into the queue when it changed and there is room.
+    fn tell_loss(&mut self, sample: u64) {
+        if self.loss == self.told_loss {
+            return;
+        }
+        let mut buffer = [0; MESSAGE_BYTES];
+        let Ok(bytes) = framing::encode_message(&Message::Loss(self.loss), &mut buffer) else { return };
+        if self.kept.is_open_for(bytes.len() + Self::RESERVE / 2) {
+            self.order = self.order.wrapping_add(1);
+            if self.kept.push(bytes, self.order, sample) {
+                self.told_loss = self.loss;
+            }
+        }
+    }
+}
+
+/// Whether order number `a` was given out before `b` (they wrap).
+const fn is_before(a: u32, b: u32) -> bool {
+    a.wrapping_sub(b) > u32::MAX / 2
+}

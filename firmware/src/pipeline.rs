@@ -1,0 +1,237 @@
+//! The path of a sample pair, from raw codes to records.
+//!
+//! ```text
+//!  codes ─► staging ─► block ─┬─► extremes ─► limits ─► storm gate ─► Excursion, Storm   (kept)
+//!  (calibrated, aligned,      ├─► account ──────────────────────────► Summary, Totals
+//!   split into modes)         ├─► levels ───────────────────────────► Levels
+//!                             ├─► snippet ring ─────────────────────► Snippet            (kept)
+//!                             └─► spectra ──────────────────────────► Spectrum
+//! ```
+//!
+//! Records depend on the samples and their indices only: any way of cutting the input into
+//! deliveries gives the same records in the same order.
+
+use crate::account::Account;
+use crate::block::Block;
+use crate::extremes::BlockSpans;
+use crate::levels::LevelMeter;
+use crate::limit_check::{LimitCheck, LimitConfig, LimitEvent};
+use crate::snippet_ring::SnippetRing;
+use crate::source::SourceDescription;
+use crate::spectrum::SpectrumMeter;
+use crate::staging::Staging;
+use crate::storm::StormGate;
+use legwise_protocol::message::{End, EndCause, Gap, GapCause, Message, Settings, Totals};
+
+/// A record and the sample count at which it was made go to one of these.
+pub type Records<'a> = dyn FnMut(&Message, u64) + 'a;
+
+/// All stages.
+#[derive(Debug)]
+pub struct Pipeline {
+    staging: Staging,
+    stages: Stages,
+}
+
+/// The stages behind the staging buffers.
+#[derive(Debug)]
+struct Stages {
+    source: SourceDescription,
+    settings: Settings,
+    config: LimitConfig,
+    is_skewed: bool,
+    limits: LimitCheck,
+    storm: StormGate,
+    account: Account,
+    levels: LevelMeter,
+    snippets: SnippetRing,
+    spectrum: SpectrumMeter,
+    /// Whether a limit was confirmed broken since [`Pipeline::take_alarm`].
+    alarm: bool,
+}
+
+impl Pipeline {
+    /// A pipeline for a source. Settings must have passed [`crate::settings::is_valid`]; numbers out of
+    /// range are bounded, not trusted.
+    pub fn new(source: SourceDescription, settings: Settings) -> Self {
+        let staging = Staging::new(&source);
+        let is_skewed = staging.is_skewed();
+        Self {
+            stages: Stages {
+                config: LimitConfig::new(&settings.limits, &settings.detection, source.legs, is_skewed),
+                source,
+                settings,
+                is_skewed,
+                limits: LimitCheck::default(),
+                storm: StormGate::default(),
+                account: Account::default(),
+                levels: LevelMeter::default(),
+                snippets: SnippetRing::default(),
+                spectrum: SpectrumMeter::default(),
+                alarm: false,
+            },
+            staging,
+        }
+    }
+
+    /// The settings in force.
+    pub const fn settings(&self) -> &Settings {
+        &self.stages.settings
+    }
+
+    /// Index of the pair expected next.
+    pub const fn next_sample(&self) -> u64 {
+        self.staging.next_sample()
+    }
+
+    /// Counts and extremes since the start.
+    pub fn totals(&self) -> Totals {
+        self.stages.account.totals(&self.stages.limits.counts())
+    }
+
+    /// Whether a limit is broken, or was since the last call. Edge suspects do not count.
+    pub fn take_alarm(&mut self) -> bool {
+        core::mem::take(&mut self.stages.alarm) | self.stages.limits.is_confirmed_outside()
+    }
+
+    /// Takes pairs; a `first_sample` beyond the expected one is a gap.
+    pub fn take(
+        &mut self,
+        first_sample: u64,
+        code_a: &[i32],
+        code_b: &[i32],
+        cause: GapCause,
+        records: &mut Records<'_>,
+    ) {
+        let expected = self.next_sample();
+        if first_sample != expected {
+            self.gap(first_sample, first_sample.saturating_sub(expected), cause, records);
+        }
+        let (mut code_a, mut code_b) = (code_a, code_b);
+        loop {
+            let used = self.staging.fill(code_a, code_b);
+            code_a = code_a.get(used..).unwrap_or(&[]);
+            code_b = code_b.get(used..).unwrap_or(&[]);
+            if !self.staging.is_full() {
+                return;
+            }
+            self.deal(records);
+        }
+    }
+
+    /// `samples` pairs are missing (0: some, not known how many); the next pair has index `next_sample`.
+    pub fn gap(&mut self, next_sample: u64, samples: u64, cause: GapCause, records: &mut Records<'_>) {
+        self.flush(records);
+        let at = self.next_sample();
+        // Before the first sample there is nothing to miss: the source simply starts there.
+        if at > 0 || self.stages.account.totals(&self.stages.limits.counts()).samples > 0 {
+            self.stages.account.gap(samples);
+            records(&Message::Gap(Gap { first_sample: at, samples, cause }), at);
+        }
+        self.staging.restart(next_sample);
+    }
+
+    /// Changes what is watched for, from the next pair on. Everything open is finished first.
+    pub fn change(&mut self, settings: Settings, records: &mut Records<'_>) {
+        self.flush(records);
+        let stages = &mut self.stages;
+        stages.settings = settings;
+        stages.config =
+            LimitConfig::new(&settings.limits, &settings.detection, stages.source.legs, stages.is_skewed);
+        records(&Message::Settings(settings), self.next_sample());
+    }
+
+    /// Finishes everything open and says `End`.
+    pub fn end(&mut self, cause: EndCause, records: &mut Records<'_>) {
+        self.flush(records);
+        let totals = self.totals();
+        records(&Message::End(End { cause, totals }), self.next_sample());
+    }
+
+    /// Deals with all staged pairs and finishes every interval.
+    fn flush(&mut self, records: &mut Records<'_>) {
+        while self.deal(records) {}
+        let sample = self.staging.next_sample();
+        self.stages.finish(sample, records);
+    }
+
+    /// Deals with one block; `false` when nothing was staged.
+    fn deal(&mut self, records: &mut Records<'_>) -> bool {
+        let Some(block) = self.staging.block() else { return false };
+        self.stages.deal(&block, records);
+        self.staging.advance();
+        true
+    }
+}
+
+impl Stages {
+    fn deal(&mut self, block: &Block<'_>, records: &mut Records<'_>) {
+        let sample = block.end_sample();
+        let records = &mut |message: &Message| records(message, sample);
+        let edge_step = i32::try_from(self.settings.detection.edge_step_uv).unwrap_or(i32::MAX);
+        let spans = BlockSpans::of(block, self.is_skewed.then_some(edge_step));
+
+        self.snippets.take(block);
+        self.check_limits(block, &spans, records);
+        self.snippets.pass(records);
+        self.storm.pass(sample, &self.settings.detection, records);
+
+        self.account.take(block, &spans);
+        let reporting = self.settings.reporting;
+        if self.account.interval_samples() >= reporting.summary_samples {
+            self.finish_summary(records);
+        }
+        self.levels.take(block, self.settings.detection.idle_below_uv);
+        if self.levels.samples() >= reporting.levels_samples {
+            self.finish_levels(records);
+        }
+        if reporting.spectrum_segments > 0 {
+            self.spectrum.take(block, reporting.spectrum_skip);
+            if self.spectrum.segments() >= reporting.spectrum_segments {
+                self.spectrum.finish(self.source.sample_rate_mhz, records);
+            }
+        }
+    }
+
+    fn check_limits(&mut self, block: &Block<'_>, spans: &BlockSpans, records: &mut dyn FnMut(&Message)) {
+        let Self { limits, storm, snippets, settings, config, .. } = self;
+        limits.check(config, block, spans, &mut |event| match event {
+            LimitEvent::Begun { number, sample } => {
+                snippets.trigger(number, sample, &settings.reporting, settings.detection.storm_samples);
+            }
+            LimitEvent::Closed(excursion) => storm.admit(excursion, &settings.detection, config, records),
+        });
+        self.alarm |= self.limits.is_confirmed_outside();
+    }
+
+    fn finish_summary(&mut self, records: &mut dyn FnMut(&Message)) {
+        let alarm = self.limits.is_confirmed_outside();
+        records(&Message::Summary(self.account.finish_interval(&self.limits.counts(), alarm)));
+    }
+
+    fn finish_levels(&mut self, records: &mut dyn FnMut(&Message)) {
+        records(&Message::Levels(self.levels.finish(self.settings.detection.idle_below_uv)));
+        records(&Message::Totals(self.account.totals(&self.limits.counts())));
+    }
+
+    /// Finishes whatever is open: a gap, a change of settings or the end follows.
+    fn finish(&mut self, sample: u64, records: &mut Records<'_>) {
+        let records = &mut |message: &Message| records(message, sample);
+        let Self { limits, storm, settings, config, .. } = self;
+        limits.cut(&mut |event| {
+            if let LimitEvent::Closed(excursion) = event {
+                storm.admit(excursion, &settings.detection, config, records);
+            }
+        });
+        self.storm.finish(records);
+        self.snippets.finish(records);
+        if self.account.interval_samples() > 0 {
+            self.finish_summary(records);
+        }
+        if self.levels.samples() > 0 {
+            self.finish_levels(records);
+        }
+        self.spectrum.finish(self.source.sample_rate_mhz, records);
+        self.spectrum.break_off();
+    }
+}

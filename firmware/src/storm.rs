@@ -1,0 +1,78 @@
+//! Storm coalescing: a night of chatter must not drown the link, and no count may be lost.
+//!
+//! Time is cut into storm windows of fixed length. The first excursions of a window are reported one
+//! by one; the rest of that window become one [`Storm`] record with exact sums.
+//!
+//! ```text
+//!  window k                                  window k+1
+//!  |e1 e2 ... e16 (one by one)  e17 ... e900 |
+//!                               \__ one Storm record, sent when the window has passed
+//! ```
+//! Windows are counted from sample 0, so the cut does not depend on how blocks fell.
+
+use crate::limit_check::{LimitConfig, merge_breach};
+use legwise_protocol::message::{Detection, Excursion, Message, Part, Storm};
+
+/// The running coalescer.
+#[derive(Clone, Copy, Debug, Default)]
+pub struct StormGate {
+    window: u64,
+    reported: u32,
+    storm: Option<Storm>,
+}
+
+impl StormGate {
+    /// Takes one closed excursion: on to `records` as it is, or into the window's storm.
+    pub fn admit(
+        &mut self,
+        excursion: Excursion,
+        detection: &Detection,
+        config: &LimitConfig,
+        records: &mut dyn FnMut(&Message),
+    ) {
+        let window = excursion.first_sample / u64::from(detection.storm_samples.max(1));
+        if window > self.window {
+            self.finish(records);
+            self.window = window;
+            self.reported = 0;
+        }
+        // Parts of a long excursion are already thinned out and must stay in one piece.
+        if self.reported < detection.storm_after || excursion.part != Part::Whole {
+            self.reported += 1;
+            records(&Message::Excursion(excursion));
+            return;
+        }
+        let edge_suspects = u32::from(excursion.is_edge_suspect);
+        match &mut self.storm {
+            None => {
+                self.storm = Some(Storm {
+                    excursions: 1,
+                    edge_suspects,
+                    first_sample: excursion.first_sample,
+                    samples: u64::from(excursion.samples),
+                    breach: excursion.breach,
+                });
+            }
+            Some(storm) => {
+                storm.excursions += 1;
+                storm.edge_suspects += edge_suspects;
+                storm.samples = excursion.first_sample + u64::from(excursion.samples) - storm.first_sample;
+                merge_breach(&mut storm.breach, &excursion.breach, config);
+            }
+        }
+    }
+
+    /// Sends the storm of a window that lies wholly before `sample`.
+    pub fn pass(&mut self, sample: u64, detection: &Detection, records: &mut dyn FnMut(&Message)) {
+        if self.storm.is_some() && sample / u64::from(detection.storm_samples.max(1)) > self.window {
+            self.finish(records);
+        }
+    }
+
+    /// Sends what is held.
+    pub fn finish(&mut self, records: &mut dyn FnMut(&Message)) {
+        if let Some(storm) = self.storm.take() {
+            records(&Message::Storm(storm));
+        }
+    }
+}
