@@ -22,6 +22,8 @@ const RANGE_UV: i32 = (BINS as i32 / 2) << BIN_SHIFT;
 const OFFSET_MASK: i32 = (1 << BIN_SHIFT) - 1;
 /// Bins either side of the mode that belong to a level.
 const AROUND: usize = 2;
+/// Bins either side of the resting level that its noise may reach: 0.1 V.
+const SKIRT: usize = 3 * AROUND;
 /// Two levels are told apart from 0.4 V on.
 const APART_BINS: usize = 400_000 >> BIN_SHIFT;
 /// A level in the resting region must hold this share of all samples, in a thousand.
@@ -113,12 +115,13 @@ impl LevelMeter {
 
     fn evaluate(&self, idle_below_uv: u32) -> Levels {
         let centre = BINS / 2;
-        let reach = ((idle_below_uv >> BIN_SHIFT) as usize).clamp(1, centre - 1);
+        // The bins that hold the threshold itself belong to the resting region.
+        let reach = ((idle_below_uv >> BIN_SHIFT) as usize + 1).clamp(1, centre - 1);
         let mut idle = self
             .mode(centre - reach, centre + reach, None)
             .filter(|mode| self.is_share(mode.held, LEAST_IDLE_PER_MILLE));
-        let mut high = self.driven(centre + reach, BINS);
-        let mut low = self.driven(0, centre - reach);
+        let mut high = self.driven(centre + reach, BINS, idle);
+        let mut low = self.driven(0, centre - reach, idle);
         if idle.is_none() {
             // A strongly biased pair rests beyond the threshold: then one side shows two levels.
             for side in [&mut high, &mut low] {
@@ -146,8 +149,12 @@ impl LevelMeter {
         }
     }
 
-    /// The mode of a region that is driven often enough and not scattered.
-    fn driven(&self, from: usize, to: usize) -> Option<Mode> {
+    /// The mode of a region that is driven often enough and not scattered. The skirt of a resting
+    /// level close to the region is not part of it.
+    fn driven(&self, from: usize, to: usize, idle: Option<Mode>) -> Option<Mode> {
+        let skirt = idle.map_or(0..0, |idle| idle.bin.saturating_sub(SKIRT)..idle.bin + SKIRT + 1);
+        let from = if skirt.contains(&from) { skirt.end } else { from };
+        let to = if skirt.contains(&to) { skirt.start } else { to };
         let region = sum(self.counts.get(from..to)?);
         if !self.is_share(region, LEAST_DRIVEN_PER_MILLE) {
             return None;
@@ -206,7 +213,7 @@ impl LevelMeter {
             .map(
                 |away| if driven.bin >= BINS / 2 { BINS / 2 + away } else { (BINS / 2).saturating_sub(away) },
             )
-            .filter(|bin| idle.is_none_or(|idle| bin.abs_diff(idle.bin) > 3 * AROUND))
+            .filter(|bin| idle.is_none_or(|idle| bin.abs_diff(idle.bin) > SKIRT))
             .map(|bin| self.counts.get(bin).copied().unwrap_or(0))
             .fold(0, u32::saturating_add)
     }

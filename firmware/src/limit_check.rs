@@ -17,6 +17,10 @@
 //!     or a gap, or the end of the data (then the excursion is marked as cut)
 //! ```
 //!
+//! On a board with skew, an excursion is an *edge suspect* when only the average broke a limit, at data
+//! edges, and never in two neighbouring samples. Traffic with bits shorter than the hold-off strings
+//! several such peaks into one excursion; it stays a suspect, because no peak speaks for another.
+//!
 //! Hysteresis and hold-off only decide when an excursion *closes*: they add no sample to it and none
 //! to the counts. A block whose extremes touch no limit needs no look at its samples.
 
@@ -127,8 +131,8 @@ struct Open {
     limits: LimitMask,
     inside_run: u32,
     has_earlier_part: bool,
-    /// Whether the part's first sample coincides with a data edge.
-    is_on_edge: bool,
+    /// Whether every sample outside so far may be a data edge seen through the skew.
+    is_suspect: bool,
 }
 
 /// The running check.
@@ -231,31 +235,41 @@ impl LimitCheck {
             dm: Span { low: sample.dm, high: sample.dm },
             clipped_samples: u64::from(sample.is_clipped),
         };
+        let is_suspicious = sample.is_edge && mask.is_average_only();
         match &mut self.open {
-            None => self.begin(config, sample, one, events),
-            Some(open) if sample.index - open.first_sample >= u64::from(config.longest_samples) => {
+            None => self.begin(sample, one, is_suspicious, events),
+            Some(open)
+                if open.is_full(config, sample.index)
+                    && open.remains_suspect(sample.index, is_suspicious) =>
+            {
+                self.close(false, events);
+                self.begin(sample, one, is_suspicious, events);
+            }
+            Some(open) if open.is_full(config, sample.index) => {
                 let part = if open.has_earlier_part { Part::Middle } else { Part::Begin };
                 self.counts.excursions += u64::from(!open.has_earlier_part);
                 events(LimitEvent::Closed(open.record(part, false, false)));
                 let limits = open.limits.with(mask);
                 let first_sample = sample.index;
-                *open = Open { first_sample, breach: one, limits, has_earlier_part: true, ..*open };
+                let (is_suspect, has_earlier_part) = (false, true);
+                *open = Open { first_sample, breach: one, limits, is_suspect, has_earlier_part, ..*open };
                 open.touch(sample.index);
             }
             Some(open) => {
                 merge_breach(&mut open.breach, &one, config);
+                open.is_suspect = open.remains_suspect(sample.index, is_suspicious);
                 open.limits = open.limits.with(mask);
                 open.touch(sample.index);
             }
         }
-        self.is_confirmed_outside = self.open.is_some_and(|open| !open.is_suspect());
+        self.is_confirmed_outside = self.open.is_some_and(|open| !open.is_suspect);
     }
 
     fn begin(
         &mut self,
-        config: &LimitConfig,
         sample: &Sample,
         breach: Breach,
+        is_suspect: bool,
         events: &mut dyn FnMut(LimitEvent),
     ) {
         self.counts.begun += 1;
@@ -268,7 +282,7 @@ impl LimitCheck {
             limits: breach.limits,
             inside_run: 0,
             has_earlier_part: false,
-            is_on_edge: config.edge_step_uv.is_some() && sample.is_edge,
+            is_suspect,
         });
         events(LimitEvent::Begun { number, sample: sample.index });
     }
@@ -293,7 +307,7 @@ impl LimitCheck {
     fn close(&mut self, is_cut: bool, events: &mut dyn FnMut(LimitEvent)) {
         let Some(open) = self.open.take() else { return };
         self.is_confirmed_outside = false;
-        let is_suspect = open.is_suspect();
+        let is_suspect = open.is_suspect;
         if is_suspect {
             self.counts.edge_suspects += 1;
         } else if !open.has_earlier_part {
@@ -321,12 +335,14 @@ impl Open {
         self.inside_run = 0;
     }
 
-    /// One sample, only the average, on a data edge of a skewed pair.
-    fn is_suspect(&self) -> bool {
-        self.is_on_edge
-            && !self.has_earlier_part
-            && self.breach.outside_samples == 1
-            && self.limits.is_average_only()
+    /// Whether the part is as long as one may be.
+    const fn is_full(&self, config: &LimitConfig, index: u64) -> bool {
+        index - self.first_sample >= config.longest_samples as u64
+    }
+
+    /// Whether it is still a suspect with one more sample outside: a peak that stands alone.
+    const fn remains_suspect(&self, index: u64, is_suspicious: bool) -> bool {
+        self.is_suspect && is_suspicious && index > self.last_outside + 1
     }
 
     fn record(&self, part: Part, is_edge_suspect: bool, is_cut: bool) -> Excursion {

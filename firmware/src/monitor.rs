@@ -12,7 +12,7 @@ use crate::source::{PairSource, SourceDescription, Taken};
 use embedded_hal::digital::OutputPin;
 use legwise_protocol::WIRE_VERSION;
 use legwise_protocol::bytes::Bytes;
-use legwise_protocol::command::{Command, Request};
+use legwise_protocol::command::Command;
 use legwise_protocol::decoder::RequestDecoder;
 use legwise_protocol::framing::DEVICE_FRAME_BYTES;
 use legwise_protocol::message::{
@@ -83,6 +83,8 @@ pub struct Monitor<S, L, P, const KEPT: usize, const PASSING: usize> {
     code_a: [i32; BLOCK_PAIRS],
     code_b: [i32; BLOCK_PAIRS],
     is_stopped: bool,
+    /// Whether pairs were passed over on request since the last one that was examined.
+    has_passed_over: bool,
     is_ended: bool,
 }
 
@@ -107,11 +109,10 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
             code_a: [0; BLOCK_PAIRS],
             code_b: [0; BLOCK_PAIRS],
             is_stopped: false,
+            has_passed_over: false,
             is_ended: false,
         };
         monitor.introduce();
-        let settings = Message::Settings(settings);
-        monitor.outbox.record(&settings, 0);
         monitor
     }
 
@@ -123,6 +124,11 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
     /// The link.
     pub const fn link_mut(&mut self) -> &mut L {
         &mut self.link
+    }
+
+    /// Index of the pair expected next.
+    pub const fn next_sample(&self) -> u64 {
+        self.pipeline.next_sample()
     }
 
     /// The source.
@@ -157,9 +163,19 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
         let records = &mut |message: &Message, sample: u64| outbox.record(message, sample);
         match taken {
             Taken::Nothing => return Ok(false),
-            Taken::Pairs { .. } if self.is_stopped => return Ok(true),
+            Taken::Pairs { first_sample, pairs, .. } if self.is_stopped => {
+                self.has_passed_over = true;
+                let is_outside = self.pipeline.take_alarm();
+                let end = first_sample.saturating_add(pairs as u64);
+                self.alarm.follow(is_outside, end).map_err(StepError::Pin)?;
+                return Ok(true);
+            }
             Taken::Pairs { first_sample, pairs, is_overrun } => {
-                let cause = if is_overrun { GapCause::Overrun } else { GapCause::Skipped };
+                let cause = match (core::mem::take(&mut self.has_passed_over), is_overrun) {
+                    (true, _) => GapCause::Stopped,
+                    (false, true) => GapCause::Overrun,
+                    (false, false) => GapCause::Skipped,
+                };
                 let code_a = self.code_a.get(..pairs).unwrap_or(&self.code_a);
                 let code_b = self.code_b.get(..pairs).unwrap_or(&self.code_b);
                 if is_overrun && first_sample == pipeline.next_sample() {
@@ -203,38 +219,42 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
         let mut buffer = [0; 64];
         let received = self.link.receive(&mut buffer)?.min(buffer.len());
         let mut decoder = core::mem::take(&mut self.requests);
-        decoder.feed_requests(buffer.get(..received).unwrap_or(&[]), |request| self.obey(&request));
+        decoder.feed_sequences(buffer.get(..received).unwrap_or(&[]), |sequence, command| {
+            self.obey(sequence, command);
+        });
         self.requests = decoder;
         Ok(received > 0)
     }
 
-    fn obey(&mut self, request: &Request) {
+    /// Carries out a request and answers it; `None` stands for a command of a later version.
+    fn obey(&mut self, sequence: u32, command: Option<Command>) {
         let mut settings = *self.pipeline.settings();
-        let outcome = match request.command {
-            Command::Acknowledge { through } => return self.outbox.acknowledge(through),
-            Command::Identify => {
+        let outcome = match command {
+            None => Outcome::Unsupported,
+            Some(Command::Acknowledge { through }) => return self.outbox.acknowledge(through),
+            Some(Command::Identify) => {
                 self.outbox.send_again();
                 self.introduce();
                 Outcome::Done
             }
-            Command::WatchLimits { receiver, limits } => {
+            Some(Command::WatchLimits { receiver, limits }) => {
                 settings.receiver = receiver;
                 settings.limits = limits;
                 self.change(settings)
             }
-            Command::SetDetection(detection) => {
+            Some(Command::SetDetection(detection)) => {
                 settings.detection = detection;
                 self.change(settings)
             }
-            Command::SetReporting(reporting) => {
+            Some(Command::SetReporting(reporting)) => {
                 settings.reporting = reporting;
                 self.change(settings)
             }
-            Command::Start => self.start(),
-            Command::Stop => self.stop(),
+            Some(Command::Start) => self.start(),
+            Some(Command::Stop) => self.stop(),
         };
         let sample = self.pipeline.next_sample();
-        self.outbox.record(&Message::Reply(Reply { to: request.sequence, outcome }), sample);
+        self.outbox.record(&Message::Reply(Reply { to: sequence, outcome }), sample);
     }
 
     fn change(&mut self, settings: Settings) -> Outcome {
@@ -274,7 +294,9 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
             skew_ns: self.description.skew_ns,
             legs: self.description.legs,
         };
-        self.outbox.record(&Message::Hello(hello), self.pipeline.next_sample());
+        let sample = self.pipeline.next_sample();
+        self.outbox.record(&Message::Hello(hello), sample);
+        self.outbox.record(&Message::Settings(*self.pipeline.settings()), sample);
     }
 }
 

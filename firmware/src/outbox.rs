@@ -11,75 +11,111 @@
 //! it is full, other kept messages too. Both are counted and told in a kept `Loss` message as soon as
 //! there is room. Counts and extremes survive any of this: they are in `Totals`.
 
-use heapless::Deque;
 use legwise_protocol::framing::{self, Delivery, Envelope, MESSAGE_BYTES};
 use legwise_protocol::message::{Loss, Message};
 
-/// Messages a queue holds at most, whatever their size.
-const MOST_MESSAGES: usize = 256;
+/// What precedes a message in a queue: length (2 bytes), order (4), sample (8), little-endian.
+const HEADER: usize = 14;
 
 /// A message in a queue.
 #[derive(Clone, Copy, Debug)]
 struct Entry {
-    start: usize,
+    /// Where its bytes begin, from the front of the queue.
+    offset: usize,
     length: usize,
     /// Counts every message made.
     order: u32,
     sample: u64,
 }
 
-/// A queue of byte strings in a ring of `N` bytes.
+impl Entry {
+    /// Where the next entry begins, from the front of the queue.
+    const fn end(&self) -> usize {
+        self.offset + self.length
+    }
+}
+
+/// A queue of messages in a ring of `N` bytes.
 #[derive(Debug)]
 struct ByteQueue<const N: usize> {
     ring: [u8; N],
-    entries: Deque<Entry, MOST_MESSAGES>,
+    start: usize,
     used: usize,
 }
 
 impl<const N: usize> ByteQueue<N> {
     const fn new() -> Self {
-        Self { ring: [0; N], entries: Deque::new(), used: 0 }
+        Self { ring: [0; N], start: 0, used: 0 }
     }
 
-    const fn room(&self) -> usize {
-        N - self.used
-    }
-
-    fn is_open_for(&self, length: usize) -> bool {
-        self.room() >= length && !self.entries.is_full()
+    const fn is_open_for(&self, length: usize) -> bool {
+        N - self.used >= length + HEADER
     }
 
     fn push(&mut self, bytes: &[u8], order: u32, sample: u64) -> bool {
-        if !self.is_open_for(bytes.len()) || N == 0 {
+        if !self.is_open_for(bytes.len()) {
             return false;
         }
-        let start = self.entries.back().map_or(0, |last| (last.start + last.length) % N);
-        for (offset, &byte) in bytes.iter().enumerate() {
-            if let Some(slot) = self.ring.get_mut((start + offset) % N) {
-                *slot = byte;
-            }
+        let mut header = [0; HEADER];
+        let length = (bytes.len() as u16).to_le_bytes();
+        let fields = length.into_iter().chain(order.to_le_bytes()).chain(sample.to_le_bytes());
+        for (slot, byte) in header.iter_mut().zip(fields) {
+            *slot = byte;
         }
-        self.used += bytes.len();
-        self.entries.push_back(Entry { start, length: bytes.len(), order, sample }).is_ok()
+        self.append(&header);
+        self.append(bytes);
+        true
     }
 
-    fn pop(&mut self) -> bool {
-        match self.entries.pop_front() {
-            Some(entry) => {
-                self.used -= entry.length.min(self.used);
-                true
-            }
-            None => false,
+    /// The entry that begins `offset` bytes from the front.
+    fn entry(&self, offset: usize) -> Option<Entry> {
+        if offset >= self.used {
+            return None;
         }
+        let mut header = [0; HEADER];
+        self.read(offset, &mut header);
+        let [l0, l1, o0, o1, o2, o3, sample @ ..] = header;
+        Some(Entry {
+            offset: offset + HEADER,
+            length: usize::from(u16::from_le_bytes([l0, l1])),
+            order: u32::from_le_bytes([o0, o1, o2, o3]),
+            sample: u64::from_le_bytes(sample),
+        })
+    }
+
+    /// Forgets the entry at the front; returns the bytes it took.
+    fn pop(&mut self) -> usize {
+        let bytes = self.entry(0).map_or(0, |entry| entry.end()).min(self.used);
+        self.start = (self.start + bytes) % N.max(1);
+        self.used -= bytes;
+        bytes
     }
 
     /// Copies an entry's bytes to `out`; the part of `out` that was written.
-    fn read<'a>(&self, entry: &Entry, out: &'a mut [u8]) -> &'a [u8] {
+    fn message<'a>(&self, entry: &Entry, out: &'a mut [u8]) -> &'a [u8] {
         let out = out.get_mut(..entry.length).unwrap_or(&mut []);
-        for (offset, byte) in out.iter_mut().enumerate() {
-            *byte = self.ring.get((entry.start + offset) % N.max(1)).copied().unwrap_or(0);
-        }
+        self.read(entry.offset, out);
         out
+    }
+
+    fn append(&mut self, bytes: &[u8]) {
+        let at = (self.start + self.used) % N.max(1);
+        let (front, back) = bytes.split_at(bytes.len().min(N - at.min(N)));
+        for (slot, &byte) in self.ring.iter_mut().skip(at).zip(front) {
+            *slot = byte;
+        }
+        for (slot, &byte) in self.ring.iter_mut().zip(back) {
+            *slot = byte;
+        }
+        self.used += bytes.len();
+    }
+
+    fn read(&self, offset: usize, out: &mut [u8]) {
+        let at = (self.start + offset) % N.max(1);
+        let around = self.ring.iter().skip(at).chain(&self.ring);
+        for (slot, &byte) in out.iter_mut().zip(around) {
+            *slot = byte;
+        }
     }
 }
 
@@ -93,8 +129,13 @@ pub struct Outbox<const KEPT: usize, const PASSING: usize> {
     passing: ByteQueue<PASSING>,
     /// Number of the oldest kept message still held.
     first_kept_number: u32,
-    /// Kept messages at the front that have been sent.
-    kept_sent: usize,
+    /// Kept messages at the front that have been sent, and the bytes they take in the queue.
+    kept_sent: u32,
+    kept_sent_bytes: usize,
+    /// Kept messages at the front that were sent at least once, before a repetition too.
+    kept_sent_ever: u32,
+    /// Sample count of the newest message.
+    newest_sample: u64,
     loss: Loss,
     told_loss: Loss,
     shed: u32,
@@ -115,6 +156,9 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
             passing: ByteQueue::new(),
             first_kept_number: 1,
             kept_sent: 0,
+            kept_sent_bytes: 0,
+            kept_sent_ever: 0,
+            newest_sample: 0,
             loss: Loss { snippet_parts: 0, records: 0 },
             told_loss: Loss { snippet_parts: 0, records: 0 },
             shed: 0,
@@ -133,11 +177,12 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
 
     /// Whether every message has been sent (kept ones may still await acknowledgement).
     pub fn is_sent(&self) -> bool {
-        self.passing.entries.is_empty() && self.kept_sent >= self.kept.entries.len()
+        self.passing.used == 0 && self.kept_sent_bytes >= self.kept.used
     }
 
     /// Takes a message made when the source had delivered `sample` pairs.
     pub fn record(&mut self, message: &Message, sample: u64) {
+        self.newest_sample = sample;
         self.tell_loss(sample);
         let mut buffer = [0; MESSAGE_BYTES];
         let Ok(bytes) = framing::encode_message(message, &mut buffer) else { return };
@@ -152,43 +197,44 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
     /// Forgets kept messages up to and including number `through`.
     pub fn acknowledge(&mut self, through: u32) {
         // Numbers that were never sent cannot have been stored: ignore them.
-        let sent_end = self.first_kept_number.wrapping_add(self.kept_sent as u32);
         let count = through.wrapping_sub(self.first_kept_number).wrapping_add(1);
-        if count > sent_end.wrapping_sub(self.first_kept_number) {
+        if count > self.kept_sent_ever {
             return;
         }
         for _ in 0..count {
-            if self.kept.pop() {
-                self.first_kept_number = self.first_kept_number.wrapping_add(1);
-                self.kept_sent = self.kept_sent.saturating_sub(1);
-            }
+            self.kept_sent_bytes -= self.kept.pop().min(self.kept_sent_bytes);
         }
+        self.first_kept_number = self.first_kept_number.wrapping_add(count);
+        self.kept_sent_ever -= count;
+        self.kept_sent = self.kept_sent.saturating_sub(count);
+        self.tell_loss(self.newest_sample);
     }
 
     /// Sends every kept message again that was not acknowledged: the host is new or was away.
     pub fn send_again(&mut self) {
         self.kept_sent = 0;
+        self.kept_sent_bytes = 0;
     }
 
     /// Writes the next frame into `out` and returns its length; 0 when nothing waits.
     /// `out` must hold [`framing::DEVICE_FRAME_BYTES`].
     pub fn next_frame(&mut self, out: &mut [u8]) -> usize {
-        let kept = self.kept.entries.iter().nth(self.kept_sent).copied();
-        let passing = self.passing.entries.front().copied();
         let mut buffer = [0; MESSAGE_BYTES];
-        let (entry, delivery, message) = match (kept, passing) {
-            (None, None) => return 0,
+        let waiting = (self.kept.entry(self.kept_sent_bytes), self.passing.entry(0));
+        let (entry, delivery, message) = match waiting {
             (Some(kept), passing) if passing.is_none_or(|passing| is_before(kept.order, passing.order)) => {
-                let number = self.first_kept_number.wrapping_add(self.kept_sent as u32);
+                let number = self.first_kept_number.wrapping_add(self.kept_sent);
                 self.kept_sent += 1;
-                (kept, Delivery::Kept { number }, self.kept.read(&kept, &mut buffer))
+                self.kept_sent_ever = self.kept_sent_ever.max(self.kept_sent);
+                self.kept_sent_bytes = kept.end();
+                (kept, Delivery::Kept { number }, self.kept.message(&kept, &mut buffer))
             }
             (_, Some(passing)) => {
-                let message = self.passing.read(&passing, &mut buffer);
+                let message = self.passing.message(&passing, &mut buffer);
                 self.passing.pop();
                 (passing, Delivery::Passing, message)
             }
-            (Some(_), None) => return 0,
+            (_, None) => return 0,
         };
         let envelope =
             Envelope { boot_id: self.boot_id, sequence: self.sequence, sample: entry.sample, delivery };
@@ -208,7 +254,7 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
 
     fn record_passing(&mut self, bytes: &[u8], sample: u64) {
         while !self.passing.is_open_for(bytes.len()) {
-            if !self.passing.pop() {
+            if self.passing.pop() == 0 {
                 return;
             }
             self.shed = self.shed.saturating_add(1);

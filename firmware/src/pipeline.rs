@@ -194,12 +194,16 @@ impl Stages {
     }
 
     fn check_limits(&mut self, block: &Block<'_>, spans: &BlockSpans, records: &mut dyn FnMut(&Message)) {
-        let Self { limits, storm, snippets, settings, config, .. } = self;
+        let Self { limits, storm, snippets, settings, config, alarm, .. } = self;
         limits.check(config, block, spans, &mut |event| match event {
             LimitEvent::Begun { number, sample } => {
                 snippets.trigger(number, sample, &settings.reporting, settings.detection.storm_samples);
             }
-            LimitEvent::Closed(excursion) => storm.admit(excursion, &settings.detection, config, records),
+            LimitEvent::Closed(excursion) => {
+                // One that begins and ends within a block is never seen open from out here.
+                *alarm |= !excursion.is_edge_suspect;
+                storm.admit(excursion, &settings.detection, config, records);
+            }
         });
         self.alarm |= self.limits.is_confirmed_outside();
     }
@@ -217,9 +221,10 @@ impl Stages {
     /// Finishes whatever is open: a gap, a change of settings or the end follows.
     fn finish(&mut self, sample: u64, records: &mut Records<'_>) {
         let records = &mut |message: &Message| records(message, sample);
-        let Self { limits, storm, settings, config, .. } = self;
+        let Self { limits, storm, settings, config, alarm, .. } = self;
         limits.cut(&mut |event| {
             if let LimitEvent::Closed(excursion) = event {
+                *alarm |= !excursion.is_edge_suspect;
                 storm.admit(excursion, &settings.detection, config, records);
             }
         });

@@ -31,7 +31,8 @@ impl StormGate {
         records: &mut dyn FnMut(&Message),
     ) {
         let window = excursion.first_sample / u64::from(detection.storm_samples.max(1));
-        if window > self.window {
+        // Not only a later one: a change of settings may number the windows anew.
+        if window != self.window {
             self.finish(records);
             self.window = window;
             self.reported = 0;
@@ -62,9 +63,9 @@ impl StormGate {
         }
     }
 
-    /// Sends the storm of a window that lies wholly before `sample`.
+    /// Sends the storm of a window that `sample` does not lie in.
     pub fn pass(&mut self, sample: u64, detection: &Detection, records: &mut dyn FnMut(&Message)) {
-        if self.storm.is_some() && sample / u64::from(detection.storm_samples.max(1)) > self.window {
+        if self.storm.is_some() && sample / u64::from(detection.storm_samples.max(1)) != self.window {
             self.finish(records);
         }
     }

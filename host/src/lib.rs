@@ -1,1 +1,24 @@
-//! x
+//! The Legwise host tool as a library; `legwise` the program is a thin layer on top.
+//!
+//! ```text
+//!  port | recording | line ─► board (the firmware on the desktop) ─► bytes ─► session ─► log ─► report
+//! ```
+//!
+//! * [`line`]: a simulated pair; [`recording`]: files of sampled legs; [`port`]: a real board;
+//! * [`board`]: the firmware pipeline run here, for the first two;
+//! * [`session`]: decodes, counts what is missing, stores; [`log`]: the SQLite file;
+//! * [`report`], [`spectrum`], [`receiver_table`], [`export`]: what a log says;
+//! * [`cli`]: the commands.
+
+pub mod board;
+pub mod cli;
+pub mod export;
+pub mod line;
+pub mod log;
+pub mod port;
+pub mod receiver_table;
+pub mod recording;
+pub mod report;
+pub mod session;
+pub mod spectrum;
+pub mod watching;

@@ -14,11 +14,14 @@
 //!      +-----------------+
 //! ```
 //!
-//! Memory is the buffer `N` and nothing else. A damaged frame costs itself only: the decoder is in
-//! step again at the next delimiter.
+//! Memory is the buffer `N` and nothing else. A damaged frame costs itself only, and its neighbour
+//! where the delimiter between them was hit: the decoder is in step again at the next delimiter.
 
-use crate::command::Request;
-use crate::framing::{CRC, CRC_BYTES, DELIMITER, DEVICE_FRAME_BYTES, DeviceFrame, REQUEST_FRAME_BYTES};
+use crate::command::{Command, Request};
+use crate::framing::{
+    CRC, CRC_BYTES, DELIMITER, DEVICE_FRAME_BYTES, DeviceFrame, Envelope, REQUEST_FRAME_BYTES,
+};
+use crate::message::Message;
 
 /// What a decoder has seen and dropped. Counts saturate.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
@@ -139,10 +142,30 @@ impl<const N: usize> Default for Decoder<N> {
 
 impl DeviceDecoder {
     /// Takes `bytes`; calls `take` with every frame that is sound and known, in order.
+    ///
+    /// A reader that acknowledges uses [`Self::feed_envelopes`]: the number of a kept message must
+    /// count even where its content is from a later version.
     pub fn feed_frames(&mut self, bytes: &[u8], mut take: impl FnMut(DeviceFrame)) {
+        self.feed_envelopes(bytes, |envelope, message| {
+            if let Some(message) = message {
+                take(DeviceFrame { envelope, message });
+            }
+        });
+    }
+
+    /// Takes `bytes`; calls `take` with the envelope of every sound frame, in order, and with its
+    /// message where this version knows it.
+    ///
+    /// Frames with an unknown message, or whose very envelope is unknown (then without a call),
+    /// are counted as unknown.
+    pub fn feed_envelopes(&mut self, bytes: &[u8], mut take: impl FnMut(Envelope, Option<Message>)) {
         let mut unknown = 0;
-        self.feed(bytes, |body| match postcard::from_bytes(body) {
-            Ok(frame) => take(frame),
+        self.feed(bytes, |body| match postcard::take_from_bytes(body) {
+            Ok((envelope, rest)) => {
+                let message = postcard::from_bytes(rest).ok();
+                unknown += u64::from(message.is_none());
+                take(envelope, message);
+            }
             Err(_) => unknown += 1,
         });
         self.count_unknown(unknown);
@@ -152,9 +175,27 @@ impl DeviceDecoder {
 impl RequestDecoder {
     /// Takes `bytes`; calls `take` with every request that is sound and known, in order.
     pub fn feed_requests(&mut self, bytes: &[u8], mut take: impl FnMut(Request)) {
+        self.feed_sequences(bytes, |sequence, command| {
+            if let Some(command) = command {
+                take(Request { sequence, command });
+            }
+        });
+    }
+
+    /// Takes `bytes`; calls `take` with the sequence number of every sound request, in order, and
+    /// with its command where this version knows it (where not: the answer is
+    /// [`crate::message::Outcome::Unsupported`]).
+    ///
+    /// Requests with an unknown command, or without a readable number (then without a call), are
+    /// counted as unknown.
+    pub fn feed_sequences(&mut self, bytes: &[u8], mut take: impl FnMut(u32, Option<Command>)) {
         let mut unknown = 0;
-        self.feed(bytes, |body| match postcard::from_bytes(body) {
-            Ok(request) => take(request),
+        self.feed(bytes, |body| match postcard::take_from_bytes(body) {
+            Ok((sequence, rest)) => {
+                let command = postcard::from_bytes(rest).ok();
+                unknown += u64::from(command.is_none());
+                take(sequence, command);
+            }
             Err(_) => unknown += 1,
         });
         self.count_unknown(unknown);

@@ -59,8 +59,9 @@ pub struct DeviceFrame {
 }
 
 /// Longest COBS form of `bytes` bytes plus the delimiter (Cheshire and Baker: one byte per 254, at least one).
+/// Saturates.
 pub const fn longest_encoding(bytes: usize) -> usize {
-    bytes + bytes.div_ceil(254) + if bytes == 0 { 1 } else { 0 } + 1
+    bytes.saturating_add(bytes.div_ceil(254)).saturating_add(if bytes == 0 { 2 } else { 1 })
 }
 
 /// Longest body of a device frame: envelope, message, checksum.

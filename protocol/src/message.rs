@@ -6,7 +6,7 @@
 use crate::bytes::Bytes;
 use crate::limits::{Limit, LimitMask, LimitSet};
 use crate::receivers::ReceiverId;
-use crate::units::Span;
+use crate::units::{Microvolts, Span};
 use postcard::experimental::max_size::MaxSize;
 use serde::{Deserialize, Serialize};
 
@@ -17,7 +17,6 @@ pub const NAME_BYTES: usize = 24;
 
 /// Everything a device sends, behind an [`crate::framing::Envelope`].
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize, MaxSize)]
-#[expect(clippy::large_enum_variant, reason = "messages live in place: there is no heap on the device")]
 pub enum Message {
     /// Who speaks: sent at start and on request.
     Hello(Hello),
@@ -104,6 +103,31 @@ pub struct LegScale {
     pub gain_uncertainty_ppm: u32,
     /// Uncertainty of the offset.
     pub offset_uncertainty_uv: u32,
+}
+
+impl LegScale {
+    /// The microvolts of `code`, by the formula above; a `shift` outside 1..=40 counts as the nearer end.
+    ///
+    /// Rounds to the nearest microvolt, ties upward; saturates at ±1000 V ([`Microvolts::BOUND`]).
+    #[inline]
+    pub const fn microvolts(&self, code: i32) -> i32 {
+        let shift = match self.shift {
+            0 => 1,
+            41.. => 40,
+            shift => shift as u32,
+        };
+        // |code * mantissa| <= 2^62 and the half is at most 2^39: the sum stays inside an i64.
+        let scaled = (code as i64 * self.mantissa as i64 + (1 << (shift - 1))) >> shift;
+        let microvolts = scaled + self.offset_uv as i64;
+        let bound = Microvolts::BOUND as i64;
+        if microvolts > bound {
+            Microvolts::BOUND
+        } else if microvolts < -bound {
+            -Microvolts::BOUND
+        } else {
+            microvolts as i32
+        }
+    }
 }
 
 /// What is being watched for, and how.

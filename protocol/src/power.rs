@@ -23,7 +23,7 @@ pub const RELATIVE_ERROR: f64 = 1.0 / 2048.0;
 
 /// The code of a power; negative values and NaN give 0.
 pub fn encode(power: f32) -> u16 {
-    if !(power > 0.0) {
+    if power.is_nan() || power <= 0.0 {
         return 0;
     }
     // Add half a step, then cut: rounds to nearest and carries into the exponent by itself.

@@ -88,9 +88,10 @@ pub enum Decision {
 impl Threshold {
     /// What `microvolts` of differential mode mean.
     pub const fn decide(self, microvolts: i32) -> Decision {
-        if microvolts >= self.high_mv * 1000 {
+        // In 64 bits: a threshold of the user's own may lie beyond ±2147 V.
+        if microvolts as i64 >= self.high_mv as i64 * 1000 {
             Decision::High
-        } else if microvolts <= self.low_mv * 1000 {
+        } else if microvolts as i64 <= self.low_mv as i64 * 1000 {
             Decision::Low
         } else {
             Decision::Undefined
@@ -169,8 +170,14 @@ pub const TABLE: [Receiver; 13] = [
         id: ReceiverId::Tia485A,
         name: "tia485a",
         title: "TIA/EIA-485-A (RS-485: Modbus serial, PROFIBUS DP, BACnet MS/TP, DMX512)",
-        terminal: Some(seen(mv(-7_000, 12_000), "485-A cl. 4.3.1 as quoted by TI ISO14xx data sheet (any bus terminal) and a serial-port textbook")),
-        average: Some(seen(mv(-7_000, 12_000), "TI SLLA272, The RS-485 Design Guide; a serial-port textbook")),
+        terminal: Some(seen(
+            mv(-7_000, 12_000),
+            "485-A cl. 4.3.1 as quoted by TI ISO14xx data sheet (any bus terminal) and a serial-port textbook",
+        )),
+        average: Some(seen(
+            mv(-7_000, 12_000),
+            "TI SLLA272, The RS-485 Design Guide; a serial-port textbook",
+        )),
         threshold: seen(threshold(-200, 200), "485-A cl. 4.3.2 as quoted by TI SLLA272 and TI AM26LV32E"),
         note: "Both readings hold together: the average and each terminal must stay inside; the terminal window binds first.",
         idle_below_mv: 600,
@@ -180,8 +187,14 @@ pub const TABLE: [Receiver; 13] = [
         name: "tia422b",
         title: "TIA/EIA-422-B (RS-422)",
         terminal: Some(remembered(mv(-10_000, 10_000), "422-B receiver input range")),
-        average: Some(seen(mv(-7_000, 7_000), "RS-422/485 interface-card manuals; camera-interface DC table citing 422-B")),
-        threshold: seen(threshold(-200, 200), "RS-422/485 interface-card manuals; a computer maker's page on EIA-422-A levels"),
+        average: Some(seen(
+            mv(-7_000, 7_000),
+            "RS-422/485 interface-card manuals; camera-interface DC table citing 422-B",
+        )),
+        threshold: seen(
+            threshold(-200, 200),
+            "RS-422/485 interface-card manuals; a computer maker's page on EIA-422-A levels",
+        ),
         note: "The terminal limit is from memory. Many 422 chips bear more than the standard asks.",
         idle_below_mv: 600,
     },
@@ -200,7 +213,10 @@ pub const TABLE: [Receiver; 13] = [
         name: "can-2003",
         title: "ISO 11898-2, 2003 and older (high-speed CAN)",
         terminal: None,
-        average: Some(seen(mv(-2_000, 7_000), "TI SN65HVD23x data sheet; TI SLOA101B; TI SN75LBC031 data sheet")),
+        average: Some(seen(
+            mv(-2_000, 7_000),
+            "TI SN65HVD23x data sheet; TI SLOA101B; TI SN75LBC031 data sheet",
+        )),
         threshold: seen(threshold(500, 900), "TI SN65HVD23x and SN75LBC031 data sheets"),
         note: "A bus that mixes generations is judged by this narrower window.",
         idle_below_mv: 700,
@@ -209,8 +225,14 @@ pub const TABLE: [Receiver; 13] = [
         id: ReceiverId::CanHighSpeed2016,
         name: "can-2016",
         title: "ISO 11898-2:2016 and later (high-speed CAN)",
-        terminal: Some(remembered(mv(-12_000, 12_000), "reading of the 2016 text that each pin is meant; the figure itself is in TI TCAN1044V and Infineon TLE9263")),
-        average: Some(seen(mv(-12_000, 12_000), "TI TCAN1044V (SLLSFG2), TCAN1146-Q1; Infineon TLE9263 table 17")),
+        terminal: Some(remembered(
+            mv(-12_000, 12_000),
+            "reading of the 2016 text that each pin is meant; the figure itself is in TI TCAN1044V and Infineon TLE9263",
+        )),
+        average: Some(seen(
+            mv(-12_000, 12_000),
+            "TI TCAN1044V (SLLSFG2), TCAN1146-Q1; Infineon TLE9263 table 17",
+        )),
         threshold: seen(threshold(500, 900), "Infineon TLE9263 table 17"),
         note: "That the window applies to each pin is from memory. Survival ratings of parts (such as 58 V) are not a working range.",
         idle_below_mv: 700,
@@ -230,7 +252,10 @@ pub const TABLE: [Receiver; 13] = [
         name: "j1939",
         title: "SAE J1939-11 / -15",
         terminal: None,
-        average: Some(remembered(mv(-2_000, 7_000), "J1939-11 common-mode range, taken to equal ISO 11898-2:2003")),
+        average: Some(remembered(
+            mv(-2_000, 7_000),
+            "J1939-11 common-mode range, taken to equal ISO 11898-2:2003",
+        )),
         threshold: seen(threshold(500, 900), "as ISO 11898-2 (TI SN65HVD23x data sheet)"),
         note: "The window is from memory. A summary's 'common mode 1.5 to 3.5 V' reads like the driver's offset, not the receiver's window.",
         idle_below_mv: 700,
@@ -241,8 +266,7 @@ pub const TABLE: [Receiver; 13] = [
         title: "TIA/EIA-644-A (LVDS)",
         terminal: Some(seen(mv(0, 2_400), "TIA PN-4584 (644-A draft) annex B")),
         average: Some(seen(mv(50, 2_350), "derived from the terminal window at 100 mV differential")),
-        threshold: seen(threshold(-100, 100), "TI SN65LVDS109 data sheet p. 5; TI DS90LV012A")
-        ,
+        threshold: seen(threshold(-100, 100), "TI SN65LVDS109 data sheet p. 5; TI DS90LV012A"),
         note: "The receiver sits at the end of the line; the ground shift it bears is about 1 V.",
         idle_below_mv: 100,
     },
@@ -272,8 +296,7 @@ pub const TABLE: [Receiver; 13] = [
         title: "FlexRay electrical physical layer",
         terminal: None,
         average: Some(seen(mv(-10_000, 15_000), "NXP TJA1085 data sheet")),
-        threshold: seen(threshold(-300, 300), "NXP TJA1085 data sheet: |DM| 150 to 300 mV is grey")
-        ,
+        threshold: seen(threshold(-300, 300), "NXP TJA1085 data sheet: |DM| 150 to 300 mV is grey"),
         note: "The bus pin's 60 V is survival only.",
         idle_below_mv: 300,
     },
@@ -281,7 +304,10 @@ pub const TABLE: [Receiver; 13] = [
         id: ReceiverId::Mil1553B,
         name: "mil1553b",
         title: "MIL-STD-1553B",
-        terminal: Some(remembered(mv(-10_000, 10_000), "MIL-STD-1553B common-mode rejection test, line to ground")),
+        terminal: Some(remembered(
+            mv(-10_000, 10_000),
+            "MIL-STD-1553B common-mode rejection test, line to ground",
+        )),
         average: None,
         threshold: remembered(threshold(-430, 430), "0.86 V p-p at the transformer stub"),
         note: "Every number is from memory. Do not clip onto flight systems.",
@@ -293,7 +319,10 @@ pub const TABLE: [Receiver; 13] = [
         title: "IEC 61158-2 type 1 (MBP, 31.25 kbit/s)",
         terminal: None,
         average: None,
-        threshold: seen(threshold(-75, 75), "0.15 V p-p, automation forum text; signal levels from a PROFIBUS manual"),
+        threshold: seen(
+            threshold(-75, 75),
+            "0.15 V p-p, automation forum text; signal levels from a PROFIBUS manual",
+        ),
         note: "The pair floats and carries 9 to 32 V between its wires: no window against a common exists. Never in explosive atmospheres unless certified.",
         idle_below_mv: 100,
     },

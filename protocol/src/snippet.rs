@@ -1,7 +1,7 @@
 //! Lossless compression of sample pairs: mid/side, first difference, Rice codes.
 //!
 //! Method: Rice 1979 and CCSDS 121.0-B for the codes, Kiely, *Selecting the Golomb parameter in
-//! Rice coding*, IPN Progress Report 42-159, 2004 for choosing the parameter. Each block stands on
+//! Rice coding*, IPN Progress Report 42-159, 2004 for bounding the parameter. Each block stands on
 //! its own, so a lost message costs that message only.
 //!
 //! ```text
@@ -17,11 +17,21 @@
 
 /// Pairs in one block at most.
 pub const BLOCK_PAIRS: usize = 64;
-/// Bytes one block can take at most: header, then 63 pairs of two raw 34-bit differences.
-pub const BLOCK_BYTES: usize = (HEADER_BITS + 63 * 2 * 42).div_ceil(8);
+/// Bytes one block can take at most, for codes anywhere in an `i32`.
+pub const BLOCK_BYTES: usize = longest_block_bytes(32, BLOCK_PAIRS);
 const HEADER_BITS: usize = 6 + 5 + 5 + 6 + 6 + 33 + 33;
 const ESCAPE_QUOTIENT: u64 = 8;
 const RAW: u32 = 31;
+
+/// Bytes a block of `pairs` pairs can take at most when every code fits `code_bits` bits.
+///
+/// Header, then raw differences: no stream is ever longer than raw. Mid differences of n-bit codes
+/// take n+1 bits in zig-zag form, side differences n+2. Saturates.
+pub const fn longest_block_bytes(code_bits: usize, pairs: usize) -> usize {
+    let pair_bits = code_bits.saturating_mul(2).saturating_add(3);
+    let stream_bits = pairs.saturating_sub(1).saturating_mul(pair_bits);
+    HEADER_BITS.saturating_add(stream_bits).div_ceil(8)
+}
 
 /// Why a block could not be read.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -147,6 +157,17 @@ fn read_stream(
     Ok(())
 }
 
+/// floor(log2(0.69 mean)), at least 0 (Kiely 2004); no division: the sum is compared with the count scaled up.
+fn k_of_mean(values: &[u64]) -> u32 {
+    let sum = values.iter().fold(0_u64, |sum, &value| sum.saturating_add(value));
+    let scaled = sum.saturating_mul(177) >> 8; // 0.69 = 177/256
+    let mut k = 0;
+    while k < 30 && (values.len() as u64) << (k + 1) <= scaled {
+        k += 1;
+    }
+    k
+}
+
 /// Parameter of one Rice stream.
 #[derive(Clone, Copy)]
 struct Code {
@@ -157,20 +178,23 @@ struct Code {
 }
 
 impl Code {
-    /// k from the mean (Kiely 2004, in the CLZ form), raw where that is no longer than Rice.
+    /// The k that makes the stream shortest; raw where that is no longer.
+    ///
+    /// The k of the mean is right for noise alone. Data edges are few and large: they pull the mean
+    /// up, cost no more than an escape each, and the best k lies below; hence the search from 0 up to
+    /// just above the mean's.
     fn choose(values: &[u64]) -> Self {
         let largest = values.iter().copied().max().unwrap_or(0);
         let width = 64 - largest.leading_zeros();
-        let sum: u64 = values.iter().sum();
-        // floor(log2(mean * 0.69)), 0.69 = 177/256; no division: compare sum with count scaled up.
-        let scaled = sum.saturating_mul(177) >> 8;
-        let mut k = 0;
-        while k < 30 && (values.len() as u64) << (k + 1) <= scaled {
-            k += 1;
-        }
-        let code = Self { k, width };
-        let rice_bits: u64 = values.iter().map(|&value| code.bits_of(value)).sum();
-        if rice_bits >= u64::from(width) * values.len() as u64 { Self { k: RAW, width } } else { code }
+        let most = (k_of_mean(values) + 1).min(30);
+        let length = |k| Self { k, width }.stream_bits(values);
+        let k = (0..=most).min_by_key(|&k| length(k)).unwrap_or(0);
+        let raw_bits = u64::from(width) * values.len() as u64;
+        Self { k: if length(k) >= raw_bits { RAW } else { k }, width }
+    }
+
+    fn stream_bits(self, values: &[u64]) -> u64 {
+        values.iter().map(|&value| self.bits_of(value)).sum()
     }
 
     fn bits_of(self, value: u64) -> u64 {

@@ -5,10 +5,13 @@
 //! common mode) and their difference then always fit an `i32`.
 
 use postcard::experimental::max_size::MaxSize;
-use serde::{Deserialize, Serialize};
+use serde::de::{Error, Unexpected};
+use serde::{Deserialize, Deserializer, Serialize};
 
 /// A voltage in integer microvolts, bounded to ±[`Microvolts::BOUND`].
-#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, PartialOrd, Ord, Serialize, Deserialize, MaxSize)]
+///
+/// Reading one from a wire or a file refuses values beyond the bound.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, PartialOrd, Ord, Serialize, MaxSize)]
 #[serde(transparent)]
 pub struct Microvolts(i32);
 
@@ -43,7 +46,7 @@ impl Microvolts {
     /// `None` for a NaN, an infinity, or a magnitude above 1000 V.
     pub fn try_from_volts(volts: f64) -> Option<Self> {
         let scaled = volts * 1e6;
-        if !(scaled.abs() <= Self::BOUND as f64) {
+        if scaled.is_nan() || scaled.abs() > Self::BOUND as f64 {
             return None;
         }
         let half = if scaled < 0.0 { -0.5 } else { 0.5 };
@@ -58,6 +61,17 @@ impl Microvolts {
     /// The value in volts, exact to the `f64`.
     pub fn volts(self) -> f64 {
         f64::from(self.0) * 1e-6
+    }
+}
+
+impl<'de> Deserialize<'de> for Microvolts {
+    fn deserialize<D: Deserializer<'de>>(deserializer: D) -> Result<Self, D::Error> {
+        let microvolts = i32::deserialize(deserializer)?;
+        if microvolts.unsigned_abs() > Self::BOUND.unsigned_abs() {
+            let found = Unexpected::Signed(i64::from(microvolts));
+            return Err(D::Error::invalid_value(found, &"microvolts within 1000 V"));
+        }
+        Ok(Self(microvolts))
     }
 }
 
@@ -100,6 +114,7 @@ impl Default for Span {
 }
 
 #[cfg(test)]
+#[allow(clippy::unwrap_used)]
 mod tests {
     use super::*;
 
@@ -112,6 +127,19 @@ mod tests {
         assert_eq!(Microvolts::try_from_volts(1000.1), None);
         assert_eq!(Microvolts::from_uv(i32::MAX).uv(), Microvolts::BOUND);
         assert_eq!(Microvolts::from_millivolts(i32::MIN).uv(), -Microvolts::BOUND);
+    }
+
+    #[test]
+    fn values_beyond_the_bound_are_not_read() {
+        let mut bytes = [0; 5];
+        for microvolts in [Microvolts::BOUND, -Microvolts::BOUND, 0] {
+            let used = postcard::to_slice(&microvolts, &mut bytes).unwrap();
+            assert_eq!(postcard::from_bytes(used), Ok(Microvolts(microvolts)));
+        }
+        for microvolts in [Microvolts::BOUND + 1, -Microvolts::BOUND - 1, i32::MAX, i32::MIN] {
+            let used = postcard::to_slice(&microvolts, &mut bytes).unwrap();
+            assert!(postcard::from_bytes::<Microvolts>(used).is_err(), "{microvolts}");
+        }
     }
 
     #[test]

@@ -1,0 +1,94 @@
+//! From errors to a line on the screen and an exit code.
+
+use crate::export::ExportError;
+use crate::line::ScenarioError;
+use crate::log::LogError;
+use crate::port::PortError;
+use crate::recording::RecordingError;
+use crate::report::ReportError;
+use crate::report::Verdict;
+use crate::watching::WatchingError;
+use std::io;
+use std::process::ExitCode;
+
+/// How the program ends.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Exit {
+    /// Done.
+    Done = 0,
+    /// Something unexpected.
+    Unexpected = 1,
+    /// The arguments are not usable.
+    Usage = 2,
+    /// The recording, scenario or log is not usable.
+    Input = 3,
+    /// The port is not usable or went away.
+    Port = 4,
+    /// Nothing more can be stored.
+    Storage = 5,
+    /// Finished; marginal.
+    Marginal = 10,
+    /// Finished; outside limits.
+    Outside = 11,
+    /// Finished; cannot judge.
+    CannotJudge = 12,
+}
+
+impl Exit {
+    /// The code of a finished run: `Done`, or by verdict where the user asked for that.
+    pub const fn of_verdict(verdict: Verdict, is_asked_for: bool) -> Self {
+        match verdict {
+            _ if !is_asked_for => Self::Done,
+            Verdict::Within => Self::Done,
+            Verdict::Marginal => Self::Marginal,
+            Verdict::Outside => Self::Outside,
+            Verdict::CannotJudge => Self::CannotJudge,
+        }
+    }
+}
+
+impl From<Exit> for ExitCode {
+    fn from(exit: Exit) -> Self {
+        Self::from(exit as u8)
+    }
+}
+
+/// Prints what went wrong, unless it was only a reader that went away; the exit code.
+pub fn explain(error: &anyhow::Error) -> Exit {
+    let exit = classify(error);
+    if exit != Exit::Done {
+        // Nothing can be done when even the error output is closed.
+        let _ = io::Write::write_all(&mut io::stderr(), format!("legwise: {error:#}\n").as_bytes());
+    }
+    exit
+}
+
+fn classify(error: &anyhow::Error) -> Exit {
+    for cause in error.chain() {
+        if let Some(error) = cause.downcast_ref::<io::Error>() {
+            return match error.kind() {
+                io::ErrorKind::BrokenPipe => Exit::Done,
+                _ => Exit::Storage,
+            };
+        }
+        if let Some(error) = cause.downcast_ref::<RecordingError>() {
+            return if error.is_about_writing() { Exit::Storage } else { Exit::Input };
+        }
+        if let Some(error) = cause.downcast_ref::<LogError>() {
+            return if error.is_about_storing() { Exit::Storage } else { Exit::Input };
+        }
+        if cause.is::<ExportError>() {
+            return Exit::Storage;
+        }
+        if cause.is::<ReportError>() || cause.is::<ScenarioError>() {
+            return Exit::Input;
+        }
+        if cause.is::<PortError>() {
+            return Exit::Port;
+        }
+        if cause.is::<WatchingError>() {
+            return Exit::Usage;
+        }
+    }
+    Exit::Unexpected
+}

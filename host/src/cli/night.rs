@@ -1,0 +1,206 @@
+//! `log`: a board on a serial port into a log file, until Ctrl-C.
+
+use super::failure::Exit;
+use super::live::LiveView;
+use super::{LogArguments, stream, terminal};
+use crate::log::{Arrival, Log, Origin};
+use crate::port::BoardPort;
+use crate::report::{Options, Report};
+use crate::session::Session;
+use crate::watching::Watching;
+use anyhow::Context;
+use indicatif::ProgressBar;
+use legwise_protocol::command::Command;
+use legwise_protocol::framing::DeviceFrame;
+use legwise_protocol::message::{Hello, Message, Outcome, Reply};
+use std::path::{Path, PathBuf};
+use std::sync::Arc;
+use std::sync::atomic::{AtomicBool, Ordering};
+use std::time::{Duration, Instant};
+
+/// How often a silent board is asked who it is.
+const ASK_AGAIN: Duration = Duration::from_secs(1);
+/// How long a stopped board may take to finish its last words.
+const LAST_WORDS: Duration = Duration::from_secs(2);
+/// How often what arrived is made durable and acknowledged.
+const STORE_EVERY: Duration = Duration::from_secs(1);
+
+pub(super) fn run(arguments: &LogArguments) -> anyhow::Result<Exit> {
+    let watching = arguments.watching.choose(None)?;
+    let path = arguments.output.clone().unwrap_or_else(default_path);
+    let port = BoardPort::open(&arguments.port, arguments.baud)?;
+    let about = stream::about(Origin::Serial, &arguments.port, arguments.point.as_deref());
+    let log = Log::create(&path, &about)?;
+    let stop = Arc::new(AtomicBool::new(false));
+    let flag = Arc::clone(&stop);
+    ctrlc::set_handler(move || flag.store(true, Ordering::SeqCst)).context("could not catch Ctrl-C; try again")?;
+
+    terminal::print(&format!("logging {} into {}; Ctrl-C ends it", arguments.port, path.display()))?;
+    if arguments.point.is_none() {
+        terminal::print("no --point given: the report cannot say where the clip sat")?;
+    }
+    let bar = terminal::state_line();
+    let mut recorder = Recorder::new(port, Session::new(log), watching);
+    let outcome = recorder.record(&bar, &stop);
+    bar.finish_and_clear();
+    let log = recorder.session.finish()?;
+    match outcome {
+        Ok(()) => summarise(&log, &path, arguments.verdict_code),
+        Err(error) => {
+            summarise(&log, &path, false)?;
+            Err(error)
+        }
+    }
+}
+
+fn default_path() -> PathBuf {
+    PathBuf::from(jiff::ZonedDateTime::now().strftime("legwise-%Y%m%d-%H%M%S.lwlog").to_string())
+}
+
+/// The verdict in a few lines, and how to see the rest.
+fn summarise(log: &Log, path: &Path, is_verdict_code: bool) -> anyhow::Result<Exit> {
+    let report = Report::from_log(log, &Options::default())?;
+    terminal::print(&crate::report::text::headline(&report, terminal::style()))?;
+    terminal::print(&format!("all of it: legwise report {}", path.display()))?;
+    Ok(Exit::of_verdict(report.verdict, is_verdict_code))
+}
+
+/// A port, a session and what has been said between them.
+struct Recorder {
+    port: BoardPort,
+    session: Session,
+    watching: Watching,
+    view: LiveView,
+    /// Boot the board introduced itself with, once it has.
+    boot_id: Option<u32>,
+    /// Sequence number of the command that sets the limits, once sent.
+    limits_sent: Option<u32>,
+    has_ended: bool,
+}
+
+impl Recorder {
+    fn new(port: BoardPort, session: Session, watching: Watching) -> Self {
+        Self { port, session, watching, view: LiveView::default(), boot_id: None, limits_sent: None, has_ended: false }
+    }
+
+    /// Records until `stop`, then asks the board to finish.
+    fn record(&mut self, bar: &ProgressBar, stop: &AtomicBool) -> anyhow::Result<()> {
+        let (mut last_asked, mut last_stored) = (None::<Instant>, Instant::now());
+        while !stop.load(Ordering::SeqCst) && !self.has_ended {
+            if self.boot_id.is_none() && last_asked.is_none_or(|asked| asked.elapsed() >= ASK_AGAIN) {
+                self.port.command(Command::Identify)?;
+                last_asked = Some(Instant::now());
+            }
+            self.listen(bar)?;
+            if last_stored.elapsed() >= STORE_EVERY {
+                self.store()?;
+                last_stored = Instant::now();
+            }
+            bar.set_message(if self.boot_id.is_none() {
+                "waiting for the board to introduce itself".to_owned()
+            } else {
+                self.view.state()
+            });
+        }
+        self.finish(bar)
+    }
+
+    /// Asks for the last words and waits for them.
+    fn finish(&mut self, bar: &ProgressBar) -> anyhow::Result<()> {
+        if !self.has_ended && self.boot_id.is_some() {
+            self.port.command(Command::Stop)?;
+            let asked = Instant::now();
+            while !self.has_ended && asked.elapsed() < LAST_WORDS {
+                self.listen(bar)?;
+            }
+        }
+        self.store()?;
+        if let Some(line) = self.view.unprinted() {
+            terminal::print_above(bar, &line)?;
+        }
+        Ok(())
+    }
+
+    /// Takes what has arrived.
+    fn listen(&mut self, bar: &ProgressBar) -> anyhow::Result<()> {
+        let mut buffer = [0; 4096];
+        let count = self.port.read(&mut buffer)?;
+        let Some(bytes) = buffer.get(..count).filter(|bytes| !bytes.is_empty()) else { return Ok(()) };
+        let mut lines = Vec::new();
+        let mut heard = Heard::default();
+        let view = &mut self.view;
+        let mut on_frame = |frame: &DeviceFrame| {
+            heard.note(frame);
+            lines.extend(view.line(frame));
+        };
+        self.session.receive(bytes, now(), &mut on_frame)?;
+        self.answer(heard, &mut lines)?;
+        for line in lines {
+            terminal::print_above(bar, &line)?;
+        }
+        Ok(())
+    }
+
+    /// Sends what the board must be told after what was heard.
+    fn answer(&mut self, heard: Heard, lines: &mut Vec<String>) -> anyhow::Result<()> {
+        self.has_ended |= heard.has_ended;
+        if let Some(hello) = heard.hello {
+            if self.boot_id != Some(heard.boot_id) {
+                let verb = if self.boot_id.is_none() { "introduced itself" } else { "has restarted" };
+                lines.push(format!("board '{}' {verb}", hello.board.as_text()));
+                self.boot_id = Some(heard.boot_id);
+                let (receiver, limits) = self.watching.on_wire();
+                self.limits_sent = Some(self.port.command(Command::WatchLimits { receiver, limits })?);
+            }
+        }
+        match heard.reply {
+            Some(Reply { to, outcome }) if Some(to) == self.limits_sent && outcome != Outcome::Done => {
+                lines.push("the board refused the limits asked for; its own stay in force, see the report".to_owned());
+            }
+            _ => {}
+        }
+        Ok(())
+    }
+
+    /// Makes what arrived durable, then tells the board that it may forget it.
+    fn store(&mut self) -> anyhow::Result<()> {
+        self.session.flush()?;
+        if let Some(through) = self.session.acknowledgement() {
+            self.port.command(Command::Acknowledge { through })?;
+        }
+        Ok(())
+    }
+}
+
+/// What matters in a handful of frames.
+#[derive(Default)]
+struct Heard {
+    boot_id: u32,
+    hello: Option<Hello>,
+    reply: Option<Reply>,
+    has_ended: bool,
+}
+
+impl Heard {
+    fn note(&mut self, frame: &DeviceFrame) {
+        match &frame.message {
+            Message::Hello(hello) => {
+                self.hello = Some(*hello);
+                self.boot_id = frame.envelope.boot_id;
+            }
+            Message::Reply(reply) => self.reply = Some(*reply),
+            Message::End(_) => self.has_ended = true,
+            _ => {}
+        }
+    }
+}
+
+fn now() -> Arrival {
+    Arrival { utc_ns: stream::utc_now_ns(), monotonic_ns: monotonic_ns() }
+}
+
+/// Nanoseconds since the program first asked.
+fn monotonic_ns() -> i64 {
+    static START: std::sync::OnceLock<Instant> = std::sync::OnceLock::new();
+    i64::try_from(START.get_or_init(Instant::now).elapsed().as_nanos()).unwrap_or(i64::MAX)
+}
