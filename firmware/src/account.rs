@@ -1,9 +1,10 @@
 //! The account of a run: intervals of readings and the totals since the start.
 
 use crate::block::Block;
-use crate::extremes::{BlockSpans, track};
+use crate::extremes::track;
 use crate::limit_check::LimitCounts;
 use legwise_protocol::message::{Summary, Totals};
+use legwise_protocol::units::Span;
 
 /// Running interval and totals.
 #[derive(Clone, Copy, Debug, Default)]
@@ -21,8 +22,10 @@ impl Account {
         self.interval.samples
     }
 
-    /// Takes a block.
-    pub fn take(&mut self, block: &Block<'_>, spans: &BlockSpans) {
+    /// Takes a block; `settled_twice_cm` is the span of VA+VB that readings are made of: data edges are
+    /// left out of it where a skew is declared.
+    pub fn take(&mut self, block: &Block<'_>, settled_twice_cm: Span) {
+        let spans = &block.spans;
         let pairs = block.pairs() as u32;
         if self.interval.samples == 0 {
             self.interval.first_sample = block.first_sample;
@@ -34,7 +37,7 @@ impl Account {
         self.interval.clipped += block.clipped;
         self.interval.leg_a.merge(spans.leg_a);
         self.interval.leg_b.merge(spans.leg_b);
-        self.interval.twice_cm.merge(spans.settled_twice_cm);
+        self.interval.twice_cm.merge(settled_twice_cm);
         self.interval.dm.merge(spans.dm);
         self.twice_cm_sum += block.twice_cm.iter().map(|&sum| i64::from(sum)).sum::<i64>();
 
@@ -42,7 +45,7 @@ impl Account {
         self.totals.clipped += u64::from(block.clipped);
         track(&mut self.totals.leg_a, spans.leg_a, block.leg_a, block.first_sample);
         track(&mut self.totals.leg_b, spans.leg_b, block.leg_b, block.first_sample);
-        track(&mut self.totals.twice_cm, spans.settled_twice_cm, block.twice_cm, block.first_sample);
+        track(&mut self.totals.twice_cm, settled_twice_cm, block.twice_cm, block.first_sample);
         track(&mut self.totals.dm, spans.dm, block.dm, block.first_sample);
     }
 

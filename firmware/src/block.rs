@@ -9,6 +9,8 @@
 //!          [ b-2  b-1 ] [ p0 p1 p2 ........... p255 ] [ p256 p257 p258 ]
 //! ```
 
+use legwise_protocol::units::Span;
+
 /// Pairs in a full block.
 pub const BLOCK_PAIRS: usize = 256;
 /// Pairs staged beyond the block.
@@ -19,6 +21,19 @@ pub const HISTORY: usize = 2;
 pub const STAGED: usize = BLOCK_PAIRS + LOOKAHEAD;
 /// Aligned outputs per block: one more than the block, for the edge rule.
 pub const ALIGNED: usize = BLOCK_PAIRS + 1;
+
+/// Lowest and highest of each quantity in a block, microvolts.
+#[derive(Clone, Copy, Debug)]
+pub struct Spans {
+    /// Leg A.
+    pub leg_a: Span,
+    /// Leg B.
+    pub leg_b: Span,
+    /// VA+VB, every sample.
+    pub twice_cm: Span,
+    /// VA−VB.
+    pub dm: Span,
+}
 
 /// A block ready for the stages. All slices have the same length, except `dm_after`.
 #[derive(Clone, Copy, Debug)]
@@ -43,6 +58,8 @@ pub struct Block<'a> {
     pub dm_after: i32,
     /// Pairs with a leg at its converter's rail.
     pub clipped: u32,
+    /// Lowest and highest of each quantity.
+    pub spans: Spans,
 }
 
 impl Block<'_> {

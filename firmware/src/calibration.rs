@@ -3,26 +3,93 @@
 //! `µV = ((code * mantissa + 2^(shift-1)) >> shift) + offset`, bounded to ±1000 V: see
 //! [`LegScale`], which is also what the host needs to read raw waveforms. A code at a converter rail
 //! is converted like any other and counted as clipped: the true voltage may lie beyond it.
+//!
+//! Codes between the rails of an ordinary converter take a short way to the same number: with
+//! `k = 32 - shift`, `((code << k) * mantissa + (2^(shift-1) << k) + (offset << 32)) >> 32` is the upper
+//! word of one multiply-accumulate. A block with any other code takes the long way.
 
 use legwise_protocol::message::LegScale;
-use legwise_protocol::units::Microvolts;
+use legwise_protocol::units::{Microvolts, Span};
 
 /// Whether a scale is one this module can apply: `shift` 1..=40 and rails in order.
 pub const fn is_valid(scale: &LegScale) -> bool {
     scale.shift >= 1 && scale.shift <= 40 && scale.rail_low_code < scale.rail_high_code
 }
 
-/// Converts `codes` into `microvolts` (the shorter length counts). A shift out of range is bounded.
-pub fn convert(scale: &LegScale, codes: &[i32], microvolts: &mut [i32]) {
-    let shift = u32::from(scale.shift).clamp(1, 40);
-    let mantissa = i64::from(scale.mantissa);
-    let half = 1_i64 << (shift - 1);
-    let (low, high) = (-i64::from(Microvolts::BOUND), i64::from(Microvolts::BOUND));
-    let offset = i64::from(scale.offset_uv);
-    for (microvolts, &code) in microvolts.iter_mut().zip(codes) {
-        // |code * mantissa| < 2^62, so neither the product nor the sums leave an i64.
-        let scaled = (i64::from(code) * mantissa + half) >> shift;
-        *microvolts = (scaled + offset).clamp(low, high) as i32;
+/// A scale, made ready.
+#[derive(Clone, Copy, Debug)]
+pub struct Calibration {
+    scale: LegScale,
+    short: Option<Short>,
+}
+
+/// The short way, where there is one: exact for codes from rail to rail.
+#[derive(Clone, Copy, Debug)]
+struct Short {
+    code_shift: u32,
+    bias: i64,
+}
+
+impl Calibration {
+    /// Makes a scale ready. A shift out of range is bounded.
+    pub fn new(scale: LegScale) -> Self {
+        let scale = LegScale { shift: scale.shift.clamp(1, 40), ..scale };
+        Self { scale, short: Short::new(&scale) }
+    }
+
+    /// The scale.
+    pub const fn scale(&self) -> &LegScale {
+        &self.scale
+    }
+
+    /// Converts `codes` into `microvolts` (the shorter length counts); the span of the codes.
+    pub fn convert(&self, codes: &[i32], microvolts: &mut [i32]) -> Span {
+        let mut span = Span::EMPTY;
+        if let Some(Short { code_shift, bias }) = self.short {
+            let mantissa = i64::from(self.scale.mantissa);
+            for (microvolts, &code) in microvolts.iter_mut().zip(codes) {
+                span.include(code);
+                let shifted = i64::from(code.wrapping_shl(code_shift));
+                *microvolts = ((shifted * mantissa).wrapping_add(bias) >> 32) as i32;
+            }
+            if span.low >= self.scale.rail_low_code && span.high <= self.scale.rail_high_code {
+                return span;
+            }
+        }
+        for (microvolts, &code) in microvolts.iter_mut().zip(codes) {
+            span.include(code);
+            *microvolts = self.scale.microvolts(code);
+        }
+        span
+    }
+
+    /// The span of microvolts that a span of codes becomes.
+    pub fn span(&self, codes: Span) -> Span {
+        let (low, high) = (self.scale.microvolts(codes.low), self.scale.microvolts(codes.high));
+        // A front end that inverts has a negative gain.
+        if self.scale.mantissa < 0 { Span { low: high, high: low } } else { Span { low, high } }
+    }
+
+    /// Whether no code of the span is at a rail.
+    pub const fn is_off_rails(&self, codes: Span) -> bool {
+        codes.low > self.scale.rail_low_code && codes.high < self.scale.rail_high_code
+    }
+}
+
+impl Short {
+    /// `None` where the upper word would not hold the exact result at both rails.
+    fn new(scale: &LegScale) -> Option<Self> {
+        let shift = u32::from(scale.shift);
+        let code_shift = 32_u32.checked_sub(shift)?;
+        let half = 1_i64 << (shift - 1);
+        let reach = 1_i64 << (31 - code_shift.min(31));
+        let is_exact = [scale.rail_low_code, scale.rail_high_code].into_iter().all(|code| {
+            let code = i64::from(code);
+            let exact = ((code * i64::from(scale.mantissa) + half) >> shift) + i64::from(scale.offset_uv);
+            (-reach..reach).contains(&code) && exact.abs() <= i64::from(Microvolts::BOUND)
+        });
+        let bias = (i64::from(scale.offset_uv) << 32).wrapping_add(half << code_shift);
+        is_exact.then_some(Self { code_shift, bias })
     }
 }
 
@@ -60,7 +127,7 @@ mod tests {
     fn conversion_is_the_rounded_exact_product() {
         let codes: [i32; 4096] = core::array::from_fn(|code| code as i32);
         let mut microvolts = [0; 4096];
-        convert(&TWELVE_BIT, &codes, &mut microvolts);
+        Calibration::new(TWELVE_BIT).convert(&codes, &mut microvolts);
         for (code, microvolts) in codes.iter().zip(microvolts) {
             let exact = f64::from(*code) * 24e6 / 4096.0 - 12e6;
             assert!((f64::from(microvolts) - exact).abs() <= 0.5, "{code}: {microvolts} against {exact}");
@@ -71,12 +138,43 @@ mod tests {
     fn wild_scales_are_bounded_not_wrapped() {
         let wild = LegScale { mantissa: i32::MAX, shift: 200, offset_uv: i32::MIN, ..TWELVE_BIT };
         let mut microvolts = [0; 2];
-        convert(&wild, &[i32::MAX, i32::MIN], &mut microvolts);
+        Calibration::new(wild).convert(&[i32::MAX, i32::MIN], &mut microvolts);
         assert_eq!(microvolts, [-Microvolts::BOUND; 2]);
         let wild = LegScale { mantissa: i32::MIN, shift: 0, ..TWELVE_BIT };
-        convert(&wild, &[i32::MAX, i32::MIN], &mut microvolts);
+        Calibration::new(wild).convert(&[i32::MAX, i32::MIN], &mut microvolts);
         assert_eq!(microvolts, [-Microvolts::BOUND, Microvolts::BOUND]);
         assert!(!is_valid(&wild));
+    }
+
+    #[test]
+    fn the_short_way_gives_the_same_as_the_long_way_for_every_code() {
+        let inverted = LegScale { mantissa: -TWELVE_BIT.mantissa, offset_uv: 13_000_000, ..TWELVE_BIT };
+        let fine = LegScale {
+            mantissa: 1_000_000_007,
+            shift: 29,
+            offset_uv: -77,
+            rail_low_code: -8_388_608,
+            rail_high_code: 8_388_607,
+            ..TWELVE_BIT
+        };
+        for scale in [TWELVE_BIT, inverted, fine] {
+            let calibration = Calibration::new(scale);
+            assert!(calibration.short.is_some());
+            let step = usize::try_from((scale.rail_high_code - scale.rail_low_code) / 4095).unwrap();
+            let mut microvolts = [0];
+            for code in (scale.rail_low_code..=scale.rail_high_code).step_by(step) {
+                let span = calibration.convert(&[code], &mut microvolts);
+                assert_eq!(microvolts, [scale.microvolts(code)], "{code}");
+                assert_eq!(calibration.span(span), Span { low: microvolts[0], high: microvolts[0] });
+            }
+        }
+    }
+
+    #[test]
+    fn a_code_beyond_the_rails_takes_the_long_way() {
+        let mut microvolts = [0; 3];
+        Calibration::new(TWELVE_BIT).convert(&[5, 1 << 28, -9], &mut microvolts);
+        assert_eq!(microvolts, [5, 1 << 28, -9].map(|code| TWELVE_BIT.microvolts(code)));
     }
 
     #[test]

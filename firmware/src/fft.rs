@@ -1,4 +1,4 @@
-//! A complex 1024-point Fourier transform: radix 4, self-sorting, real and imaginary parts apart.
+//! A complex 1024-point Fourier transform: radix 4, self-sorting.
 //!
 //! Decimation in frequency in the Stockham order (Cochran et al., *What is the fast Fourier
 //! transform?*, Proc. IEEE 55(10), 1967; Van Loan, *Computational Frameworks for the Fast Fourier
@@ -15,19 +15,22 @@
 pub const POINTS: usize = 1024;
 const QUARTER: usize = POINTS / 4;
 
-/// Real and imaginary parts.
-#[derive(Clone, Copy, Debug)]
-pub struct Complexes {
-    /// Real parts.
-    pub re: [f32; POINTS],
-    /// Imaginary parts.
-    pub im: [f32; POINTS],
+/// A complex number.
+#[derive(Clone, Copy, Debug, Default, PartialEq)]
+pub struct Complex {
+    /// Real part.
+    pub re: f32,
+    /// Imaginary part.
+    pub im: f32,
 }
 
-impl Complexes {
-    /// All zero.
-    pub const ZERO: Self = Self { re: [0.0; POINTS], im: [0.0; POINTS] };
+impl Complex {
+    /// Zero.
+    pub const ZERO: Self = Self { re: 0.0, im: 0.0 };
 }
+
+/// What is transformed, and the result.
+pub type Complexes = [Complex; POINTS];
 
 /// Three powers of one root of unity: (re, im) of w, w², w³ with w = exp(−j 2π k/N).
 type Twiddle = [f32; 6];
@@ -61,99 +64,64 @@ pub fn transform(data: &mut Complexes, result: &mut Complexes) {
 /// One radix-4 pass at stride `stride`: butterfly p, column q reads x[q + stride (p + m r)] for
 /// r = 0..4 with m = N/(4 stride), and writes y[q + stride (4p + r)].
 fn pass(from: &Complexes, to: &mut Complexes, stride: usize) {
-    let [re0, re1, re2, re3] = quarters(&from.re);
-    let [im0, im1, im2, im3] = quarters(&from.im);
-    let inputs_re = re0
-        .chunks_exact(stride)
-        .zip(re1.chunks_exact(stride))
-        .zip(re2.chunks_exact(stride))
-        .zip(re3.chunks_exact(stride));
-    let inputs_im = im0
-        .chunks_exact(stride)
-        .zip(im1.chunks_exact(stride))
-        .zip(im2.chunks_exact(stride))
-        .zip(im3.chunks_exact(stride));
-    let outputs = to.re.chunks_exact_mut(4 * stride).zip(to.im.chunks_exact_mut(4 * stride));
-    let twiddles = TWIDDLES.iter().step_by(stride);
-    for (((inputs_re, inputs_im), (out_re, out_im)), twiddle) in
-        inputs_re.zip(inputs_im).zip(outputs).zip(twiddles)
-    {
-        let (((a_re, b_re), c_re), d_re) = inputs_re;
-        let (((a_im, b_im), c_im), d_im) = inputs_im;
-        let [o0_re, o1_re, o2_re, o3_re] = quarters_mut(out_re);
-        let [o0_im, o1_im, o2_im, o3_im] = quarters_mut(out_im);
-        let a = a_re.iter().zip(a_im);
-        let b = b_re.iter().zip(b_im);
-        let c = c_re.iter().zip(c_im);
-        let d = d_re.iter().zip(d_im);
-        let out_low = o0_re.iter_mut().zip(o0_im).zip(o1_re.iter_mut().zip(o1_im));
-        let out_high = o2_re.iter_mut().zip(o2_im).zip(o3_re.iter_mut().zip(o3_im));
+    let [from0, from1, from2, from3] = quarters(from).map(|quarter| quarter.chunks_exact(stride));
+    let inputs = from0.zip(from1).zip(from2.zip(from3));
+    let outputs = to.chunks_exact_mut(4 * stride);
+    for ((((a, b), (c, d)), out), twiddle) in inputs.zip(outputs).zip(TWIDDLES.iter().step_by(stride)) {
         let &[w1_re, w1_im, w2_re, w2_im, w3_re, w3_im] = twiddle;
-        for ((((a, b), (c, d)), ((y0_re, y0_im), (y1_re, y1_im))), ((y2_re, y2_im), (y3_re, y3_im))) in
-            a.zip(b).zip(c.zip(d)).zip(out_low).zip(out_high)
-        {
-            let [x0, x1, x2, x3] = butterfly((*a.0, *a.1), (*b.0, *b.1), (*c.0, *c.1), (*d.0, *d.1));
-            (*y0_re, *y0_im) = x0;
-            (*y1_re, *y1_im) = multiply(x1, (w1_re, w1_im));
-            (*y2_re, *y2_im) = multiply(x2, (w2_re, w2_im));
-            (*y3_re, *y3_im) = multiply(x3, (w3_re, w3_im));
+        let [out0, out1, out2, out3] = quarters_mut(out);
+        let inputs = a.iter().zip(b).zip(c.iter().zip(d));
+        let outputs = out0.iter_mut().zip(out1).zip(out2.iter_mut().zip(out3));
+        for (((a, b), (c, d)), ((y0, y1), (y2, y3))) in inputs.zip(outputs) {
+            let [x0, x1, x2, x3] = butterfly(*a, *b, *c, *d);
+            *y0 = x0;
+            *y1 = multiply(x1, w1_re, w1_im);
+            *y2 = multiply(x2, w2_re, w2_im);
+            *y3 = multiply(x3, w3_re, w3_im);
         }
     }
 }
 
-/// The pass at stride N/4: one butterfly, all its factors are 1.
+/// The pass at stride N/4: all factors are 1.
 fn last_pass(from: &Complexes, to: &mut Complexes) {
-    let [re0, re1, re2, re3] = quarters(&from.re);
-    let [im0, im1, im2, im3] = quarters(&from.im);
-    let inputs =
-        re0.iter().zip(im0).zip(re1.iter().zip(im1)).zip(re2.iter().zip(im2).zip(re3.iter().zip(im3)));
-    let [o0_re, o1_re, o2_re, o3_re] = quarters_mut(&mut to.re);
-    let [o0_im, o1_im, o2_im, o3_im] = quarters_mut(&mut to.im);
-    let out_low = o0_re.iter_mut().zip(o0_im).zip(o1_re.iter_mut().zip(o1_im));
-    let out_high = o2_re.iter_mut().zip(o2_im).zip(o3_re.iter_mut().zip(o3_im));
-    for (((a_b, c_d), ((y0_re, y0_im), (y1_re, y1_im))), ((y2_re, y2_im), (y3_re, y3_im))) in
-        inputs.zip(out_low).zip(out_high)
-    {
-        let ((a, b), (c, d)) = (a_b, c_d);
-        let [x0, x1, x2, x3] = butterfly((*a.0, *a.1), (*b.0, *b.1), (*c.0, *c.1), (*d.0, *d.1));
-        (*y0_re, *y0_im) = x0;
-        (*y1_re, *y1_im) = x1;
-        (*y2_re, *y2_im) = x2;
-        (*y3_re, *y3_im) = x3;
+    let [a, b, c, d] = quarters(from);
+    let [out0, out1, out2, out3] = quarters_mut(to);
+    let inputs = a.iter().zip(b).zip(c.iter().zip(d));
+    let outputs = out0.iter_mut().zip(out1).zip(out2.iter_mut().zip(out3));
+    for (((a, b), (c, d)), ((y0, y1), (y2, y3))) in inputs.zip(outputs) {
+        [*y0, *y1, *y2, *y3] = butterfly(*a, *b, *c, *d);
     }
 }
-
-type Complex = (f32, f32);
 
 /// The four-point transform.
 #[inline(always)]
 fn butterfly(a: Complex, b: Complex, c: Complex, d: Complex) -> [Complex; 4] {
-    let sum_ac = (a.0 + c.0, a.1 + c.1);
-    let difference_ac = (a.0 - c.0, a.1 - c.1);
-    let sum_bd = (b.0 + d.0, b.1 + d.1);
+    let sum_ac = Complex { re: a.re + c.re, im: a.im + c.im };
+    let difference_ac = Complex { re: a.re - c.re, im: a.im - c.im };
+    let sum_bd = Complex { re: b.re + d.re, im: b.im + d.im };
     // -j (b - d)
-    let turned_bd = (b.1 - d.1, d.0 - b.0);
+    let turned_bd = Complex { re: b.im - d.im, im: d.re - b.re };
     [
-        (sum_ac.0 + sum_bd.0, sum_ac.1 + sum_bd.1),
-        (difference_ac.0 + turned_bd.0, difference_ac.1 + turned_bd.1),
-        (sum_ac.0 - sum_bd.0, sum_ac.1 - sum_bd.1),
-        (difference_ac.0 - turned_bd.0, difference_ac.1 - turned_bd.1),
+        Complex { re: sum_ac.re + sum_bd.re, im: sum_ac.im + sum_bd.im },
+        Complex { re: difference_ac.re + turned_bd.re, im: difference_ac.im + turned_bd.im },
+        Complex { re: sum_ac.re - sum_bd.re, im: sum_ac.im - sum_bd.im },
+        Complex { re: difference_ac.re - turned_bd.re, im: difference_ac.im - turned_bd.im },
     ]
 }
 
 #[inline(always)]
-fn multiply(x: Complex, w: Complex) -> Complex {
-    (x.0 * w.0 - x.1 * w.1, x.0 * w.1 + x.1 * w.0)
+fn multiply(x: Complex, re: f32, im: f32) -> Complex {
+    Complex { re: x.re * re - x.im * im, im: x.re * im + x.im * re }
 }
 
-fn quarters(values: &[f32; POINTS]) -> [&[f32]; 4] {
+fn quarters(values: &Complexes) -> [&[Complex]; 4] {
     let (low, high) = values.split_at(POINTS / 2);
     let (q0, q1) = low.split_at(QUARTER);
     let (q2, q3) = high.split_at(QUARTER);
     [q0, q1, q2, q3]
 }
 
-fn quarters_mut(values: &mut [f32]) -> [&mut [f32]; 4] {
+fn quarters_mut(values: &mut [Complex]) -> [&mut [Complex]; 4] {
     let length = values.len();
     let (low, high) = values.split_at_mut(length / 2);
     let (q0, q1) = low.split_at_mut(length / 4);
@@ -174,7 +142,7 @@ mod tests {
 
     fn reference(data: &Complexes) -> std::vec::Vec<Complex64> {
         let mut buffer: std::vec::Vec<_> =
-            data.re.iter().zip(&data.im).map(|(&re, &im)| Complex64::new(re.into(), im.into())).collect();
+            data.iter().map(|x| Complex64::new(x.re.into(), x.im.into())).collect();
         FftPlanner::new().plan_fft_forward(POINTS).process(&mut buffer);
         buffer
     }
@@ -184,20 +152,20 @@ mod tests {
         let mut seed = 1;
         let mut worst = 0.0_f64;
         for _ in 0..50 {
-            let mut data = Complexes::ZERO;
-            let mut scratch = Complexes::ZERO;
+            let mut data = [Complex::ZERO; POINTS];
+            let mut scratch = [Complex::ZERO; POINTS];
             for n in 0..POINTS {
-                data.re[n] = noise(&mut seed);
-                data.im[n] = noise(&mut seed);
-                scratch.re[n] = f32::NAN;
-                scratch.im[n] = noise(&mut seed);
+                data[n].re = noise(&mut seed);
+                data[n].im = noise(&mut seed);
+                scratch[n].re = f32::NAN;
+                scratch[n].im = noise(&mut seed);
             }
             let expected = reference(&data);
             transform(&mut data, &mut scratch);
             let data = scratch;
             let largest = expected.iter().map(|x| x.norm()).fold(0.0, f64::max);
             for (k, expected) in expected.iter().enumerate() {
-                let error = Complex64::new(data.re[k].into(), data.im[k].into()) - expected;
+                let error = Complex64::new(data[k].re.into(), data[k].im.into()) - expected;
                 worst = worst.max(error.norm() / largest);
             }
         }
@@ -208,21 +176,17 @@ mod tests {
     #[test]
     fn one_tone_lands_in_one_bin_in_natural_order() {
         for bin in [0, 1, 2, 5, 255, 256, 511, 512, 700, 1023] {
-            let mut data = Complexes::ZERO;
-            for n in 0..POINTS {
+            let mut data = [Complex::ZERO; POINTS];
+            for (n, slot) in data.iter_mut().enumerate() {
                 let turn = core::f64::consts::TAU * ((bin * n) % POINTS) as f64 / POINTS as f64;
-                data.re[n] = libm::cos(turn) as f32;
-                data.im[n] = libm::sin(turn) as f32;
+                *slot = Complex { re: libm::cos(turn) as f32, im: libm::sin(turn) as f32 };
             }
-            let mut result = Complexes::ZERO;
+            let mut result = [Complex::ZERO; POINTS];
             transform(&mut data, &mut result);
             let data = result;
-            for k in 0..POINTS {
+            for (k, out) in data.iter().enumerate() {
                 let expected = if k == bin { POINTS as f32 } else { 0.0 };
-                assert!(
-                    (data.re[k] - expected).abs() < 1e-3 && data.im[k].abs() < 1e-3,
-                    "bin {bin}, output {k}"
-                );
+                assert!((out.re - expected).abs() < 1e-3 && out.im.abs() < 1e-3, "bin {bin}, output {k}");
             }
         }
     }

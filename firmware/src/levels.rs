@@ -45,13 +45,21 @@ const IDLE: usize = 0;
 const HIGH: usize = 1;
 const LOW: usize = 2;
 
+/// One bin of the histogram.
+#[derive(Clone, Copy, Debug)]
+struct Bin {
+    /// Samples.
+    count: u32,
+    /// Sum of their offsets within the bin, in steps of 16 µV.
+    offset: u32,
+}
+
 /// Histogram and sums of one interval.
 #[derive(Debug)]
 pub struct LevelMeter {
     first_sample: u64,
     samples: u32,
-    counts: [u32; BINS],
-    offsets: [u32; BINS],
+    bins: [Bin; BINS],
     state: usize,
     settled: [u32; 3],
     twice_cm_sums: [i64; 3],
@@ -62,8 +70,7 @@ impl Default for LevelMeter {
         Self {
             first_sample: 0,
             samples: 0,
-            counts: [0; BINS],
-            offsets: [0; BINS],
+            bins: [Bin { count: 0, offset: 0 }; BINS],
             state: IDLE,
             settled: [0; 3],
             twice_cm_sums: [0; 3],
@@ -82,28 +89,43 @@ impl LevelMeter {
         if self.samples == 0 {
             self.first_sample = block.first_sample;
         }
-        let threshold = i32::try_from(idle_below_uv).unwrap_or(i32::MAX);
-        let mut state = self.state;
-        for (&dm, &twice_cm) in block.dm.iter().zip(block.twice_cm) {
+        for &dm in block.dm {
             let bounded = dm.clamp(-RANGE_UV, RANGE_UV - 1);
-            let bin = ((bounded >> BIN_SHIFT) + BINS as i32 / 2) as usize;
-            if let (Some(count), Some(offset)) = (self.counts.get_mut(bin), self.offsets.get_mut(bin)) {
-                *count = count.wrapping_add(1);
-                *offset = offset.wrapping_add(((bounded & OFFSET_MASK) >> OFFSET_SHIFT) as u32);
+            let number = ((bounded >> BIN_SHIFT) + BINS as i32 / 2) as usize % BINS;
+            if let Some(bin) = self.bins.get_mut(number) {
+                bin.count = bin.count.wrapping_add(1);
+                bin.offset = bin.offset.wrapping_add(((bounded & OFFSET_MASK) >> OFFSET_SHIFT) as u32);
             }
-            let now = usize::from(dm > threshold) | usize::from(dm < -threshold) << 1;
-            if now == state {
-                if let (Some(settled), Some(sum)) =
-                    (self.settled.get_mut(now), self.twice_cm_sums.get_mut(now))
-                {
-                    *settled = settled.wrapping_add(1);
-                    *sum += i64::from(twice_cm);
-                }
-            }
-            state = now;
         }
-        self.state = state;
+        self.take_plateaus(block, i32::try_from(idle_below_uv).unwrap_or(i32::MAX));
         self.samples = self.samples.saturating_add(block.pairs() as u32);
+    }
+
+    /// Sums the common mode of each stretch in one state, its first sample left out.
+    fn take_plateaus(&mut self, block: &Block<'_>, threshold: i32) {
+        let mut range = StateRange::new(self.state, threshold);
+        let (mut settled, mut sum) = (0_u32, 0_i64);
+        for (&dm, &twice_cm) in block.dm.iter().zip(block.twice_cm) {
+            if range.holds(dm) {
+                settled += 1;
+                sum += i64::from(twice_cm);
+            } else {
+                self.add_plateau(settled, sum);
+                (settled, sum) = (0, 0);
+                self.state = usize::from(dm > threshold) | usize::from(dm < -threshold) << 1;
+                range = StateRange::new(self.state, threshold);
+            }
+        }
+        self.add_plateau(settled, sum);
+    }
+
+    fn add_plateau(&mut self, settled: u32, sum: i64) {
+        if let Some(total) = self.settled.get_mut(self.state) {
+            *total = total.wrapping_add(settled);
+        }
+        if let Some(total) = self.twice_cm_sums.get_mut(self.state) {
+            *total += sum;
+        }
     }
 
     /// The levels of the interval, and a fresh start.
@@ -155,7 +177,7 @@ impl LevelMeter {
         let skirt = idle.map_or(0..0, |idle| idle.bin.saturating_sub(SKIRT)..idle.bin + SKIRT + 1);
         let from = if skirt.contains(&from) { skirt.end } else { from };
         let to = if skirt.contains(&to) { skirt.start } else { to };
-        let region = sum(self.counts.get(from..to)?);
+        let region = sum(self.bins.get(from..to)?);
         if !self.is_share(region, LEAST_DRIVEN_PER_MILLE) {
             return None;
         }
@@ -177,8 +199,8 @@ impl LevelMeter {
             if apart_from.is_some_and(|other| bin.abs_diff(other.bin) < APART_BINS) {
                 continue;
             }
-            let held = sum(self.around(bin, &self.counts));
-            let is_taller = |bin: usize| self.counts.get(bin).copied().unwrap_or(0);
+            let held = sum(self.around(bin));
+            let is_taller = |bin: usize| self.bins.get(bin).map_or(0, |bin| bin.count);
             if held > best.held || held == best.held && is_taller(bin) > is_taller(best.bin) {
                 best = Mode { bin, held };
             }
@@ -186,16 +208,15 @@ impl LevelMeter {
         (best.held > 0).then_some(best)
     }
 
-    fn around<'a>(&self, bin: usize, values: &'a [u32; BINS]) -> &'a [u32] {
-        values.get(bin.saturating_sub(AROUND)..(bin + AROUND + 1).min(BINS)).unwrap_or(&[])
+    fn around(&self, bin: usize) -> &[Bin] {
+        self.bins.get(bin.saturating_sub(AROUND)..(bin + AROUND + 1).min(BINS)).unwrap_or(&[])
     }
 
     /// Mean of the samples around a mode.
     fn level(&self, mode: Mode) -> Level {
         let first_bin = mode.bin.saturating_sub(AROUND) as i64 - BINS as i64 / 2;
         let (mut total, mut held) = (0_i64, 0_i64);
-        let bins = self.around(mode.bin, &self.counts).iter().zip(self.around(mode.bin, &self.offsets));
-        for (number, (&count, &offset)) in bins.enumerate() {
+        for (number, &Bin { count, offset }) in self.around(mode.bin).iter().enumerate() {
             let base = (first_bin + number as i64) << BIN_SHIFT;
             total += i64::from(count) * base + (i64::from(offset) << OFFSET_SHIFT);
             held += i64::from(count);
@@ -214,7 +235,7 @@ impl LevelMeter {
                 |away| if driven.bin >= BINS / 2 { BINS / 2 + away } else { (BINS / 2).saturating_sub(away) },
             )
             .filter(|bin| idle.is_none_or(|idle| bin.abs_diff(idle.bin) > SKIRT))
-            .map(|bin| self.counts.get(bin).copied().unwrap_or(0))
+            .map(|bin| self.bins.get(bin).map_or(0, |bin| bin.count))
             .fold(0, u32::saturating_add)
     }
 
@@ -227,6 +248,29 @@ impl LevelMeter {
 
     fn is_share(&self, held: u32, per_mille: u32) -> bool {
         held > 0 && u64::from(held) * 1000 >= u64::from(self.samples) * u64::from(per_mille)
+    }
+}
+
+/// The values of DM that belong to one state: `low` and the `width` values above it.
+#[derive(Clone, Copy)]
+struct StateRange {
+    low: i32,
+    width: u32,
+}
+
+impl StateRange {
+    fn new(state: usize, threshold: i32) -> Self {
+        let (low, high) = match state {
+            HIGH => (threshold.saturating_add(1), i32::MAX),
+            LOW => (i32::MIN, (-threshold).saturating_sub(1)),
+            _ => (-threshold, threshold),
+        };
+        Self { low, width: high.wrapping_sub(low) as u32 }
+    }
+
+    /// One subtraction and one comparison.
+    fn holds(self, dm: i32) -> bool {
+        dm.wrapping_sub(self.low) as u32 <= self.width
     }
 }
 
@@ -244,6 +288,6 @@ impl Mode {
     }
 }
 
-fn sum(counts: &[u32]) -> u32 {
-    counts.iter().copied().fold(0, u32::saturating_add)
+fn sum(bins: &[Bin]) -> u32 {
+    bins.iter().map(|bin| bin.count).fold(0, u32::saturating_add)
 }

@@ -24,9 +24,9 @@
 //! Hysteresis and hold-off only decide when an excursion *closes*: they add no sample to it and none
 //! to the counts. A block whose extremes touch no limit needs no look at its samples.
 
-use crate::block::Block;
+use crate::block::{Block, Spans};
 use crate::calibration;
-use crate::extremes::{BlockSpans, is_edge};
+use crate::extremes::is_edge;
 use legwise_protocol::limits::{Limit, LimitMask, LimitSet};
 use legwise_protocol::message::{Breach, Detection, Excursion, LegScale, Part};
 use legwise_protocol::units::Span;
@@ -84,7 +84,7 @@ impl LimitConfig {
     }
 
     /// Whether any sample with these extremes breaks a limit.
-    fn is_any_outside(&self, spans: &BlockSpans) -> bool {
+    fn is_any_outside(&self, spans: &Spans) -> bool {
         let highest = self.distances(spans.leg_a.high, spans.leg_b.high, spans.twice_cm.high);
         let lowest = self.distances(spans.leg_a.low, spans.leg_b.low, spans.twice_cm.low);
         highest.into_iter().chain(lowest).any(|distance| distance > 0)
@@ -93,6 +93,7 @@ impl LimitConfig {
 
 /// Exact counts since the start.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct LimitCounts {
     /// Samples outside any limit.
     pub outside: u64,
@@ -108,6 +109,7 @@ pub struct LimitCounts {
 
 /// What the check tells the stages after it.
 #[derive(Clone, Copy, Debug)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum LimitEvent {
     /// An excursion began at this sample.
     Begun {
@@ -167,14 +169,8 @@ impl LimitCheck {
     }
 
     /// Checks every sample of `block`.
-    pub fn check(
-        &mut self,
-        config: &LimitConfig,
-        block: &Block<'_>,
-        spans: &BlockSpans,
-        events: &mut dyn FnMut(LimitEvent),
-    ) {
-        if self.open.is_none() && !config.is_any_outside(spans) {
+    pub fn check(&mut self, config: &LimitConfig, block: &Block<'_>, events: &mut dyn FnMut(LimitEvent)) {
+        if self.open.is_none() && !config.is_any_outside(&block.spans) {
             return;
         }
         let legs = block.leg_a.iter().zip(block.leg_b);
@@ -182,8 +178,8 @@ impl LimitCheck {
         let codes = block.code_a.iter().zip(block.code_b);
         let mut before = block.dm_before;
         let mut ahead = block.dm.iter().skip(1);
-        let mut index = block.first_sample;
-        for (((&leg_a, &leg_b), (&twice_cm, &dm)), (&code_a, &code_b)) in legs.zip(modes).zip(codes) {
+        let samples = (block.first_sample..).zip(legs.zip(modes).zip(codes));
+        for (index, (((&leg_a, &leg_b), (&twice_cm, &dm)), (&code_a, &code_b))) in samples {
             let after = ahead.next().copied().unwrap_or(block.dm_after);
             let distances = config.distances(leg_a, leg_b, twice_cm);
             let worst = distances.into_iter().fold(i32::MIN, i32::max);
@@ -196,7 +192,6 @@ impl LimitCheck {
                 self.inside(config, &distances, events);
             }
             before = dm;
-            index += 1;
         }
     }
 

@@ -9,18 +9,20 @@ use crate::outbox::Outbox;
 use crate::pipeline::Pipeline;
 use crate::settings;
 use crate::source::{PairSource, SourceDescription, Taken};
-use embedded_hal::digital::OutputPin;
+use crate::trace;
+use embedded_hal::digital::{ErrorType, OutputPin};
 use legwise_protocol::WIRE_VERSION;
 use legwise_protocol::bytes::Bytes;
 use legwise_protocol::command::Command;
 use legwise_protocol::decoder::RequestDecoder;
-use legwise_protocol::framing::DEVICE_FRAME_BYTES;
+use legwise_protocol::framing::{DELIMITER, DEVICE_FRAME_BYTES};
 use legwise_protocol::message::{
     EndCause, GapCause, Hello, Message, NAME_BYTES, Outcome, Reply, ResetCause, Settings,
 };
 
 /// Who a device is.
 #[derive(Clone, Copy, Debug)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Identity {
     /// Drawn anew at each start.
     pub boot_id: u32,
@@ -34,6 +36,7 @@ pub struct Identity {
 
 /// What a step did.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Step {
     /// Pairs were taken or bytes moved.
     Worked,
@@ -45,6 +48,7 @@ pub enum Step {
 
 /// What failed in a step; the next step may be tried.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum StepError<S, L, P> {
     /// The source.
     Source(S),
@@ -66,6 +70,10 @@ impl<S: core::fmt::Debug, L: core::fmt::Debug, P: core::fmt::Debug> core::fmt::D
     }
 }
 
+/// What a step on source `S`, link `L` and pin `P` gives.
+pub type StepResult<T, S, L, P> =
+    Result<T, StepError<<S as PairSource>::Error, <L as Link>::Error, <P as ErrorType>::Error>>;
+
 /// The device. `KEPT` and `PASSING` are the sizes of the outbox in bytes.
 #[derive(Debug)]
 pub struct Monitor<S, L, P, const KEPT: usize, const PASSING: usize> {
@@ -82,6 +90,7 @@ pub struct Monitor<S, L, P, const KEPT: usize, const PASSING: usize> {
     frame_sent: usize,
     code_a: [i32; BLOCK_PAIRS],
     code_b: [i32; BLOCK_PAIRS],
+    has_obeyed: bool,
     is_stopped: bool,
     /// Whether pairs were passed over on request since the last one that was examined.
     has_passed_over: bool,
@@ -103,11 +112,13 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
             pipeline: Pipeline::new(description, settings),
             outbox: Outbox::new(identity.boot_id),
             requests: RequestDecoder::new(),
-            frame: [0; DEVICE_FRAME_BYTES],
-            frame_length: 0,
+            // One delimiter first: whatever the line carried before ends there.
+            frame: [DELIMITER; DEVICE_FRAME_BYTES],
+            frame_length: 1,
             frame_sent: 0,
             code_a: [0; BLOCK_PAIRS],
             code_b: [0; BLOCK_PAIRS],
+            has_obeyed: false,
             is_stopped: false,
             has_passed_over: false,
             is_ended: false,
@@ -119,6 +130,11 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
     /// The outbox, to see what was shed or lost.
     pub const fn outbox(&self) -> &Outbox<KEPT, PASSING> {
         &self.outbox
+    }
+
+    /// Whether the host has ever asked for anything.
+    pub const fn has_obeyed(&self) -> bool {
+        self.has_obeyed
     }
 
     /// The link.
@@ -140,7 +156,11 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
     ///
     /// # Errors
     /// When source, link or pin fail. State stays sound; step again.
-    pub fn step(&mut self) -> Result<Step, StepError<S::Error, L::Error, P::Error>> {
+    pub fn step(&mut self) -> StepResult<Step, S, L, P> {
+        self.work().inspect_err(trace::failure)
+    }
+
+    fn work(&mut self) -> StepResult<Step, S, L, P> {
         let has_received = self.receive().map_err(StepError::Link)?;
         let has_sampled = self.sample()?;
         let has_sent = self.send().map_err(StepError::Link)?;
@@ -154,7 +174,7 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
     }
 
     /// Takes samples if there are any; `true` when something was done.
-    fn sample(&mut self) -> Result<bool, StepError<S::Error, L::Error, P::Error>> {
+    fn sample(&mut self) -> StepResult<bool, S, L, P> {
         if self.is_ended {
             return Ok(false);
         }
@@ -228,10 +248,14 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
 
     /// Carries out a request and answers it; `None` stands for a command of a later version.
     fn obey(&mut self, sequence: u32, command: Option<Command>) {
+        self.has_obeyed = true;
         let mut settings = *self.pipeline.settings();
         let outcome = match command {
             None => Outcome::Unsupported,
-            Some(Command::Acknowledge { through }) => return self.outbox.acknowledge(through),
+            Some(Command::Acknowledge { through }) => {
+                trace::acknowledged(through);
+                return self.outbox.acknowledge(through);
+            }
             Some(Command::Identify) => {
                 self.outbox.send_again();
                 self.introduce();
@@ -253,6 +277,7 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
             Some(Command::Start) => self.start(),
             Some(Command::Stop) => self.stop(),
         };
+        trace::command(sequence, command.as_ref(), outcome);
         let sample = self.pipeline.next_sample();
         self.outbox.record(&Message::Reply(Reply { to: sequence, outcome }), sample);
     }

@@ -11,6 +11,7 @@
 //! it is full, other kept messages too. Both are counted and told in a kept `Loss` message as soon as
 //! there is room. Counts and extremes survive any of this: they are in `Totals`.
 
+use crate::trace;
 use legwise_protocol::framing::{self, Delivery, Envelope, MESSAGE_BYTES};
 use legwise_protocol::message::{Loss, Message};
 
@@ -180,8 +181,19 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
         self.passing.used == 0 && self.kept_sent_bytes >= self.kept.used
     }
 
+    /// Whether nothing is held any more, acknowledged or not.
+    pub const fn is_empty(&self) -> bool {
+        self.passing.used == 0 && self.kept.used == 0
+    }
+
+    /// Bytes still free for kept messages.
+    pub const fn kept_room(&self) -> usize {
+        KEPT - self.kept.used
+    }
+
     /// Takes a message made when the source had delivered `sample` pairs.
     pub fn record(&mut self, message: &Message, sample: u64) {
+        trace::record(message, sample);
         self.newest_sample = sample;
         self.tell_loss(sample);
         let mut buffer = [0; MESSAGE_BYTES];
@@ -274,6 +286,7 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
             self.order = self.order.wrapping_add(1);
             if self.kept.push(bytes, self.order, sample) {
                 self.told_loss = self.loss;
+                trace::loss(&self.loss);
             }
         }
     }

@@ -13,7 +13,7 @@
 
 use crate::account::Account;
 use crate::block::Block;
-use crate::extremes::BlockSpans;
+use crate::extremes::settled_twice_cm;
 use crate::levels::LevelMeter;
 use crate::limit_check::{LimitCheck, LimitConfig, LimitEvent};
 use crate::snippet_ring::SnippetRing;
@@ -21,6 +21,7 @@ use crate::source::SourceDescription;
 use crate::spectrum::SpectrumMeter;
 use crate::staging::Staging;
 use crate::storm::StormGate;
+use crate::trace;
 use legwise_protocol::message::{End, EndCause, Gap, GapCause, Message, Settings, Totals};
 
 /// A record and the sample count at which it was made go to one of these.
@@ -169,14 +170,14 @@ impl Stages {
         let sample = block.end_sample();
         let records = &mut |message: &Message| records(message, sample);
         let edge_step = i32::try_from(self.settings.detection.edge_step_uv).unwrap_or(i32::MAX);
-        let spans = BlockSpans::of(block, self.is_skewed.then_some(edge_step));
+        let settled = if self.is_skewed { settled_twice_cm(block, edge_step) } else { block.spans.twice_cm };
 
         self.snippets.take(block);
-        self.check_limits(block, &spans, records);
+        self.check_limits(block, records);
         self.snippets.pass(records);
         self.storm.pass(sample, &self.settings.detection, records);
 
-        self.account.take(block, &spans);
+        self.account.take(block, settled);
         let reporting = self.settings.reporting;
         if self.account.interval_samples() >= reporting.summary_samples {
             self.finish_summary(records);
@@ -193,10 +194,11 @@ impl Stages {
         }
     }
 
-    fn check_limits(&mut self, block: &Block<'_>, spans: &BlockSpans, records: &mut dyn FnMut(&Message)) {
+    fn check_limits(&mut self, block: &Block<'_>, records: &mut dyn FnMut(&Message)) {
         let Self { limits, storm, snippets, settings, config, alarm, .. } = self;
-        limits.check(config, block, spans, &mut |event| match event {
+        limits.check(config, block, &mut |event| match event {
             LimitEvent::Begun { number, sample } => {
+                trace::begun(number, sample);
                 snippets.trigger(number, sample, &settings.reporting, settings.detection.storm_samples);
             }
             LimitEvent::Closed(excursion) => {

@@ -169,7 +169,7 @@ impl SnippetRing {
 /// Copies `codes` into the ring from `start` on, around its end.
 fn copy_around(ring: &mut [i32; RING], start: usize, codes: &[i32]) {
     let (front, back) = codes.split_at(codes.len().min(RING - start.min(RING)));
-    for (slot, &code) in ring.iter_mut().skip(start).zip(front) {
+    for (slot, &code) in ring.get_mut(start..).unwrap_or(&mut []).iter_mut().zip(front) {
         *slot = code;
     }
     for (slot, &code) in ring.iter_mut().zip(back) {

@@ -4,6 +4,7 @@ use legwise_protocol::message::LegScale;
 
 /// What a source is, as far as the pipeline must know. Constant while the source lives.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct SourceDescription {
     /// Pairs per second, in millihertz.
     pub sample_rate_mhz: u64,
@@ -16,6 +17,7 @@ pub struct SourceDescription {
 
 /// What a call to [`PairSource::take`] brought.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Taken {
     /// No pair is ready yet; ask again.
     Nothing,

@@ -3,7 +3,7 @@
 //! * Segments of 1024 pairs, 50 % overlap, mean removed, periodic Hann window: Welch, IEEE Trans.
 //!   AU-15, 1967; window figures in Harris, Proc. IEEE 66(1), 1978.
 //! * One transform for the pair (two real signals in one complex transform, a textbook identity):
-//!   z = CM + j DM, then with P = Z[k] and Q = conj Z[N−k]: |CM|² = |P+Q|²/4, |DM|² = |P−Q|²/4.
+//!   `z = CM + j DM`, then with `P = Z[k]` and `Q = conj Z[N−k]`: `|CM|² = |P+Q|²/4`, `|DM|² = |P−Q|²/4`.
 //! * Result: one-sided power spectral density in V²/Hz, `2|X|²/(fs Σw²)`, 1× at 0 Hz and at fs/2.
 //!
 //! The transform in `f32` leaks about 6e-8 of the differential mode's r.m.s. value per sample into the
@@ -13,7 +13,7 @@
 //! is another user of this accumulator: it holds one rung and knows its rate only when publishing.
 
 use crate::block::Block;
-use crate::fft::{Complexes, POINTS, transform};
+use crate::fft::{Complex, Complexes, POINTS, transform};
 use legwise_protocol::bytes::Bytes;
 use legwise_protocol::message::{Message, Mode, PAYLOAD_BYTES, SpectrumPart};
 use legwise_protocol::power;
@@ -26,12 +26,13 @@ const WINDOW_POWER: f32 = 3.0 * POINTS as f32 / 8.0;
 /// Bins one message carries.
 const BINS_PER_PART: usize = PAYLOAD_BYTES / 2;
 
-/// First half of the periodic Hann window, `(1 − cos 2πn/N)/2`; the other half mirrors it.
+/// First half of the periodic Hann window in volts per microvolt, `(1 − cos 2πn/N)/2 · 1e-6`; the other
+/// half mirrors it.
 static WINDOW: [f32; BINS] = {
     let mut window = [0.0; BINS];
     let mut n = 0;
     while n < BINS {
-        window[n] = (0.5 - 0.5 * crate::trigonometry::sine_cosine_of_turn(n, POINTS).1) as f32;
+        window[n] = ((0.5 - 0.5 * crate::trigonometry::sine_cosine_of_turn(n, POINTS).1) * 1e-6) as f32;
         n += 1;
     }
     window
@@ -40,8 +41,10 @@ static WINDOW: [f32; BINS] = {
 /// Segment under construction, sums, and the transform's working space.
 #[derive(Debug)]
 pub struct SpectrumMeter {
-    /// Volts: common mode in `re`, differential mode in `im`.
-    segment: Complexes,
+    /// VA+VB of the segment, microvolts.
+    twice_cm: [i32; POINTS],
+    /// VA−VB of the segment, microvolts.
+    dm: [i32; POINTS],
     filled: usize,
     /// Pairs still to be passed over before the next segment.
     pass_over: u32,
@@ -58,7 +61,8 @@ pub struct SpectrumMeter {
 impl Default for SpectrumMeter {
     fn default() -> Self {
         Self {
-            segment: Complexes::ZERO,
+            twice_cm: [0; POINTS],
+            dm: [0; POINTS],
             filled: 0,
             pass_over: 0,
             first_sample: 0,
@@ -67,8 +71,8 @@ impl Default for SpectrumMeter {
             skipped: 0,
             common: [0.0; BINS],
             differential: [0.0; BINS],
-            work: Complexes::ZERO,
-            transformed: Complexes::ZERO,
+            work: [Complex::ZERO; POINTS],
+            transformed: [Complex::ZERO; POINTS],
         }
     }
 }
@@ -89,12 +93,8 @@ impl SpectrumMeter {
             let over = dm.len().min(self.pass_over as usize);
             self.pass_over -= over as u32;
             let room = (dm.len() - over).min(POINTS - self.filled);
-            let slots = self.segment.re.iter_mut().zip(&mut self.segment.im).skip(self.filled);
-            let pairs = twice_cm.iter().zip(dm).skip(over).take(room);
-            for ((re, im), (&sum, &difference)) in slots.zip(pairs) {
-                *re = sum as f32 * 0.5e-6;
-                *im = difference as f32 * 1e-6;
-            }
+            fill(&mut self.twice_cm, self.filled, twice_cm.get(over..over + room));
+            fill(&mut self.dm, self.filled, dm.get(over..over + room));
             self.filled += room;
             let used = over + room;
             sample += used as u64;
@@ -131,8 +131,8 @@ impl SpectrumMeter {
     /// Keeps the second half as the first of the next segment, or passes over some.
     fn move_on(&mut self, skip: u16) {
         if skip == 0 {
-            self.segment.re.copy_within(HALF.., 0);
-            self.segment.im.copy_within(HALF.., 0);
+            self.twice_cm.copy_within(HALF.., 0);
+            self.dm.copy_within(HALF.., 0);
             self.filled = HALF;
         } else {
             // Without overlap half a segment is passed over anyway: skip 1 leaves no hole.
@@ -148,25 +148,31 @@ impl SpectrumMeter {
         }
         self.end_sample = end_sample;
         self.segments += 1;
-        windowed(&self.segment.re, &mut self.work.re);
-        windowed(&self.segment.im, &mut self.work.im);
+        self.apply_window();
         transform(&mut self.work, &mut self.transformed);
         self.accumulate();
     }
 
+    /// Volts, mean removed and windowed: common mode into `re`, differential mode into `im`.
+    fn apply_window(&mut self) {
+        let (cm_mean, dm_mean) = (mean(&self.twice_cm), mean(&self.dm));
+        let rise_and_fall = WINDOW.iter().chain(WINDOW.iter().rev().skip(1));
+        let pairs = self.twice_cm.iter().zip(&self.dm);
+        for ((out, (&twice_cm, &dm)), &window) in self.work.iter_mut().zip(pairs).zip(rise_and_fall) {
+            out.re = twice_cm.saturating_sub(cm_mean) as f32 * (window * 0.5);
+            out.im = dm.saturating_sub(dm_mean) as f32 * window;
+        }
+    }
+
     /// Adds |P+Q|² and |P−Q|² of every bin.
     fn accumulate(&mut self) {
-        let (re, im) = (&self.transformed.re, &self.transformed.im);
+        let spectrum = &self.transformed;
         // Bin 0 is its own mirror; bins 1.. mirror N-1 downwards.
-        let mirror_re = re.iter().take(1).chain(re.iter().rev());
-        let mirror_im = im.iter().take(1).chain(im.iter().rev());
-        let own = re.iter().zip(im);
+        let mirror = spectrum.iter().take(1).chain(spectrum.iter().rev());
         let sums = self.common.iter_mut().zip(&mut self.differential);
-        for (((&p_re, &p_im), (&q_re, &q_im)), (common, differential)) in
-            own.zip(mirror_re.zip(mirror_im)).zip(sums)
-        {
-            let (sum_re, sum_im) = (p_re + q_re, p_im - q_im);
-            let (difference_re, difference_im) = (p_re - q_re, p_im + q_im);
+        for ((p, q), (common, differential)) in spectrum.iter().zip(mirror).zip(sums) {
+            let (sum_re, sum_im) = (p.re + q.re, p.im - q.im);
+            let (difference_re, difference_im) = (p.re - q.re, p.im + q.im);
             *common += sum_re * sum_re + sum_im * sum_im;
             *differential += difference_re * difference_re + difference_im * difference_im;
         }
@@ -196,27 +202,16 @@ impl SpectrumMeter {
     }
 }
 
-/// Mean removed, then windowed.
-fn windowed(values: &[f32; POINTS], out: &mut [f32; POINTS]) {
-    let mean = mean(values);
-    let (out_rise, out_fall) = out.split_at_mut(HALF);
-    let (rise, fall) = values.split_at(HALF);
-    for ((out, &value), &window) in out_rise.iter_mut().zip(rise).zip(&WINDOW) {
-        *out = (value - mean) * window;
-    }
-    for ((out, &value), &window) in out_fall.iter_mut().zip(fall).zip(WINDOW.iter().rev()) {
-        *out = (value - mean) * window;
+/// Copies values to `slots` from `start` on.
+fn fill(slots: &mut [i32; POINTS], start: usize, values: Option<&[i32]>) {
+    let slots = slots.get_mut(start..).unwrap_or(&mut []);
+    for (slot, &value) in slots.iter_mut().zip(values.unwrap_or(&[])) {
+        *slot = value;
     }
 }
 
-/// Mean in a fixed order of four interleaved sums: the same on every machine, and short of round-off.
-fn mean(values: &[f32; POINTS]) -> f32 {
-    let mut sums = [0.0_f32; 4];
-    for group in values.chunks_exact(4) {
-        for (sum, &value) in sums.iter_mut().zip(group) {
-            *sum += value;
-        }
-    }
-    let [s0, s1, s2, s3] = sums;
-    ((s0 + s1) + (s2 + s3)) * (1.0 / POINTS as f32)
+/// Mean, rounded toward negative infinity: exact to a microvolt, far below any converter's step.
+fn mean(values: &[i32; POINTS]) -> i32 {
+    let sum: i64 = values.iter().map(|&value| i64::from(value)).sum();
+    (sum >> POINTS.ilog2()) as i32
 }

@@ -1,15 +1,15 @@
 //! Staging: deliveries of any length in, whole blocks out, calibrated, aligned and split into modes.
 
 use crate::alignment::Aligner;
-use crate::block::{ALIGNED, BLOCK_PAIRS, Block, HISTORY, LOOKAHEAD, STAGED};
-use crate::calibration;
+use crate::block::{ALIGNED, BLOCK_PAIRS, Block, HISTORY, LOOKAHEAD, STAGED, Spans};
+use crate::calibration::{self, Calibration};
 use crate::source::SourceDescription;
-use legwise_protocol::message::LegScale;
+use legwise_protocol::units::Span;
 
 /// Buffers between the source and the stages.
 #[derive(Debug)]
 pub struct Staging {
-    legs: [LegScale; 2],
+    legs: [Calibration; 2],
     aligner: Aligner,
     /// Index of the first staged pair.
     first_sample: u64,
@@ -30,7 +30,7 @@ impl Staging {
     /// Empty buffers for a source.
     pub fn new(source: &SourceDescription) -> Self {
         Self {
-            legs: source.legs,
+            legs: source.legs.map(Calibration::new),
             aligner: Aligner::new(source.skew_ns, source.sample_rate_mhz),
             first_sample: 0,
             staged: 0,
@@ -67,7 +67,8 @@ impl Staging {
     pub fn fill(&mut self, code_a: &[i32], code_b: &[i32]) -> usize {
         let pairs = code_a.len().min(code_b.len()).min(STAGED - self.staged);
         for (staged, codes) in [(&mut self.code_a, code_a), (&mut self.code_b, code_b)] {
-            for (slot, &code) in staged.iter_mut().skip(self.staged).zip(codes.iter().take(pairs)) {
+            let free = staged.get_mut(self.staged..).unwrap_or(&mut []);
+            for (slot, &code) in free.iter_mut().zip(codes.get(..pairs).unwrap_or(&[])) {
                 *slot = code;
             }
         }
@@ -87,24 +88,18 @@ impl Staging {
         if pairs == 0 {
             return None;
         }
-        self.repeat_last();
-        let [scale_a, scale_b] = &self.legs;
-        calibration::convert(scale_a, &self.code_a, &mut self.leg_a);
-        let (history, staged_b) = self.leg_b.split_at_mut(HISTORY);
-        calibration::convert(scale_b, &self.code_b, staged_b);
-        if !self.has_history {
-            history.fill(*staged_b.first()?);
+        if self.staged < STAGED {
+            self.repeat_last();
         }
-        self.aligner.align(&self.leg_b, &mut self.aligned_b);
-        let legs = self.leg_a.iter().zip(&self.aligned_b);
-        for ((sum, difference), (&a, &b)) in self.twice_cm.iter_mut().zip(&mut self.dm).zip(legs.clone()) {
-            *sum = a + b;
-            *difference = a - b;
+        let [scale_a, scale_b] = self.legs;
+        let spans_of_codes = (self.convert_a(&scale_a, pairs)?, self.convert_b(&scale_b, pairs)?);
+        if self.aligner.is_skewed() {
+            self.aligner.align(&self.leg_b, &mut self.aligned_b);
         }
-        let (&last_a, &last_b) = legs.last()?;
-        *self.dm.last_mut()? = last_a - last_b;
-        let dm_before = if self.has_history { self.dm_before } else { *self.dm.first()? };
+        let (twice_cm, dm) = self.split_modes(pairs)?;
         let (code_a, code_b) = (self.code_a.get(..pairs)?, self.code_b.get(..pairs)?);
+        let is_clear = scale_a.is_off_rails(spans_of_codes.0) && scale_b.is_off_rails(spans_of_codes.1);
+        let legs = [*scale_a.scale(), *scale_b.scale()];
         Some(Block {
             first_sample: self.first_sample,
             code_a,
@@ -113,10 +108,51 @@ impl Staging {
             leg_b: self.leg_b.get(HISTORY..HISTORY + pairs)?,
             twice_cm: self.twice_cm.get(..pairs)?,
             dm: self.dm.get(..pairs)?,
-            dm_before,
+            dm_before: if self.has_history { self.dm_before } else { *self.dm.first()? },
             dm_after: *self.dm.get(pairs)?,
-            clipped: calibration::count_clipped(&self.legs, code_a, code_b),
+            clipped: if is_clear { 0 } else { calibration::count_clipped(&legs, code_a, code_b) },
+            spans: Spans {
+                leg_a: scale_a.span(spans_of_codes.0),
+                leg_b: scale_b.span(spans_of_codes.1),
+                twice_cm,
+                dm,
+            },
         })
+    }
+
+    /// Converts leg A; the span of the block's own codes.
+    fn convert_a(&mut self, scale: &Calibration, pairs: usize) -> Option<Span> {
+        let (own, ahead) = self.leg_a.split_at_mut_checked(pairs)?;
+        scale.convert(self.code_a.get(pairs..)?, ahead);
+        Some(scale.convert(self.code_a.get(..pairs)?, own))
+    }
+
+    /// Converts leg B, behind its history; the span of the block's own codes.
+    fn convert_b(&mut self, scale: &Calibration, pairs: usize) -> Option<Span> {
+        let (history, staged) = self.leg_b.split_at_mut_checked(HISTORY)?;
+        let (own, ahead) = staged.split_at_mut_checked(pairs)?;
+        scale.convert(self.code_b.get(pairs..)?, ahead);
+        let span = scale.convert(self.code_b.get(..pairs)?, own);
+        if !self.has_history {
+            history.fill(*own.first()?);
+        }
+        Some(span)
+    }
+
+    /// Sum and difference of the legs, and their spans.
+    fn split_modes(&mut self, pairs: usize) -> Option<(Span, Span)> {
+        let b_at_a: &[i32] =
+            if self.aligner.is_skewed() { &self.aligned_b } else { self.leg_b.get(HISTORY..)? };
+        let (mut sums, mut differences) = (Span::EMPTY, Span::EMPTY);
+        let legs = self.leg_a.get(..pairs)?.iter().zip(b_at_a);
+        for ((sum, difference), (&a, &b)) in self.twice_cm.iter_mut().zip(&mut self.dm).zip(legs) {
+            *sum = a + b;
+            *difference = a - b;
+            sums.include(a + b);
+            differences.include(a - b);
+        }
+        *self.dm.get_mut(pairs)? = *self.leg_a.get(pairs)? - *b_at_a.get(pairs)?;
+        Some((sums, differences))
     }
 
     /// Moves on past the block just dealt with: its tail becomes history, the lookahead moves up.

@@ -57,7 +57,10 @@ impl<S: PairSource> VirtualBoard<S> {
     pub fn new(source: S, settings: Settings, board: &'static str, boot_id: u32) -> Self {
         let identity = Identity { boot_id, board, serial: 0, reset_cause: ResetCause::Software };
         let Ok(alarm) = AlarmPin::new(NoPin, 0);
-        Self { monitor: Box::new(Monitor::new(identity, source, MemoryPipe::default(), alarm, settings)), commands: 0 }
+        Self {
+            monitor: Box::new(Monitor::new(identity, source, MemoryPipe::default(), alarm, settings)),
+            commands: 0,
+        }
     }
 
     /// Runs until a batch of bytes has been said, or for a while; appends the bytes to `bytes`.

@@ -4,7 +4,7 @@
 //!  port | recording | line ─► board (the firmware on the desktop) ─► bytes ─► session ─► log ─► report
 //! ```
 //!
-//! * [`line`]: a simulated pair; [`recording`]: files of sampled legs; [`port`]: a real board;
+//! * [`mod@line`]: a simulated pair; [`recording`]: files of sampled legs; [`port`]: a real board;
 //! * [`board`]: the firmware pipeline run here, for the first two;
 //! * [`session`]: decodes, counts what is missing, stores; [`log`]: the SQLite file;
 //! * [`report`], [`spectrum`], [`receiver_table`], [`export`]: what a log says;

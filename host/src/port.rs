@@ -15,7 +15,9 @@ const READ_WAIT: Duration = Duration::from_millis(100);
 #[derive(Debug, thiserror::Error)]
 pub enum PortError {
     /// There is no such port.
-    #[error("could not open {port}: there is no such port; try 'legwise ports' to see which exist, and check the cable")]
+    #[error(
+        "could not open {port}: there is no such port; try 'legwise ports' to see which exist, and check the cable"
+    )]
     Missing {
         /// The port asked for.
         port: String,
@@ -32,6 +34,12 @@ pub enum PortError {
     /// Another program holds the port.
     #[error("could not open {port}: it is in use; try closing the other program that has it open")]
     Busy {
+        /// The port asked for.
+        port: String,
+    },
+    /// It exists and is something else.
+    #[error("could not open {port}: it is no serial port; try 'legwise ports' to see which are")]
+    NoSerialPort {
         /// The port asked for.
         port: String,
     },
@@ -72,11 +80,12 @@ impl BoardPort {
     /// # Errors
     /// When it does not exist, may not be opened, or is in use.
     pub fn open(name: &str, baud: u32) -> Result<Self, PortError> {
-        let port = serialport::new(name, baud)
-            .timeout(READ_WAIT)
-            .open()
-            .map_err(|error| explain(name, &error))?;
-        Ok(Self { name: name.to_owned(), port, commands: 0 })
+        let port =
+            serialport::new(name, baud).timeout(READ_WAIT).open().map_err(|error| explain(name, &error))?;
+        let mut port = Self { name: name.to_owned(), port, commands: 0 };
+        // Whatever stood half written in the board's buffer ends here.
+        port.write(&[framing::DELIMITER])?;
+        Ok(port)
     }
 
     /// Waits up to a tenth of a second for bytes; returns how many came, 0 for none.
@@ -87,7 +96,9 @@ impl BoardPort {
         match self.port.read(buffer) {
             Ok(0) => Err(self.lost("end of stream")),
             Ok(count) => Ok(count),
-            Err(error) if matches!(error.kind(), io::ErrorKind::TimedOut | io::ErrorKind::Interrupted) => Ok(0),
+            Err(error) if matches!(error.kind(), io::ErrorKind::TimedOut | io::ErrorKind::Interrupted) => {
+                Ok(0)
+            }
             Err(error) => Err(self.lost(&error.to_string())),
         }
     }
@@ -101,10 +112,15 @@ impl BoardPort {
         let mut frame = [0; REQUEST_FRAME_BYTES];
         let request = Request { sequence: self.commands, command };
         let length = framing::encode_request(&request, &mut frame).unwrap_or(0);
-        match self.port.write_all(&frame[..length]) {
-            Ok(()) => Ok(self.commands),
+        self.write(&frame[..length])?;
+        Ok(self.commands)
+    }
+
+    fn write(&mut self, bytes: &[u8]) -> Result<(), PortError> {
+        match self.port.write_all(bytes) {
+            Ok(()) => Ok(()),
             // A board that does not take bytes for a while is no reason to stop listening to it.
-            Err(error) if error.kind() == io::ErrorKind::TimedOut => Ok(self.commands),
+            Err(error) if error.kind() == io::ErrorKind::TimedOut => Ok(()),
             Err(error) => Err(self.lost(&error.to_string())),
         }
     }
@@ -154,10 +170,16 @@ fn explain(name: &str, error: &serialport::Error) -> PortError {
     match error.kind() {
         serialport::ErrorKind::Io(io::ErrorKind::PermissionDenied) => PortError::PermissionDenied { port },
         serialport::ErrorKind::Io(io::ErrorKind::NotFound) => PortError::Missing { port },
-        serialport::ErrorKind::NoDevice if lower.contains("busy") => PortError::Busy { port },
+        serialport::ErrorKind::NoDevice if lower.contains("busy") || lower.contains("lock") => {
+            PortError::Busy { port }
+        }
         serialport::ErrorKind::NoDevice => PortError::Missing { port },
         _ if lower.contains("permission denied") => PortError::PermissionDenied { port },
         _ if lower.contains("busy") => PortError::Busy { port },
+        // What the C library says of a file without a line behind it.
+        _ if lower.contains("typewriter") || lower.contains("inappropriate ioctl") => {
+            PortError::NoSerialPort { port }
+        }
         _ => PortError::Other { port, reason },
     }
 }

@@ -20,7 +20,7 @@ mod kept;
 use crate::log::{Arrival, LinkCounts, Log, LogError, Stored};
 use kept::KeptNumbers;
 use legwise_protocol::decoder::{DecoderCounts, DeviceDecoder};
-use legwise_protocol::framing::{DELIMITER, Delivery, DeviceFrame};
+use legwise_protocol::framing::{DELIMITER, Delivery, DeviceFrame, Envelope};
 use legwise_protocol::message::Message;
 use std::collections::BTreeMap;
 
@@ -116,10 +116,15 @@ impl Session {
         // One frame at a time, so that damage is counted where it happened.
         for piece in bytes.split_inclusive(|&byte| byte == DELIMITER) {
             let mut arrived = None;
-            self.decoder.feed_frames(piece, |frame| arrived = Some(frame));
+            self.decoder.feed_envelopes(piece, |envelope, message| arrived = Some((envelope, message)));
             self.count_damage();
-            if let Some(frame) = arrived {
-                outcome = outcome.and(self.take(&frame, arrival, on_frame));
+            match arrived {
+                Some((envelope, Some(message))) => {
+                    let frame = DeviceFrame { envelope, message };
+                    outcome = outcome.and(self.take(&frame, arrival, on_frame));
+                }
+                Some((envelope, None)) => self.pass_over(&envelope),
+                None => {}
             }
         }
         let since = &mut self.since_commit;
@@ -232,7 +237,7 @@ impl Session {
         arrival: Arrival,
         on_frame: &mut dyn FnMut(&DeviceFrame),
     ) -> Result<(), LogError> {
-        let follows = self.follow(frame);
+        let follows = self.follow(&frame.envelope);
         let boot = self.boots.entry(frame.envelope.boot_id).or_default();
         boot.has_hello |= matches!(frame.message, Message::Hello(_));
         let (is_new, number) = match frame.envelope.delivery {
@@ -253,9 +258,21 @@ impl Session {
         stored.map(|_: Stored| ())
     }
 
+    /// Counts in a message of a later version: it cannot be stored, and waiting for it would stop the
+    /// acknowledgements for good, so its kept number counts as taken.
+    fn pass_over(&mut self, envelope: &Envelope) {
+        let follows = self.follow(envelope);
+        self.since_commit.has_news = true;
+        if let Delivery::Kept { number } = envelope.delivery {
+            let boot = self.boots.entry(envelope.boot_id).or_default();
+            boot.kept.take(number, follows == Follows::Next);
+            self.since_commit.has_kept = true;
+        }
+    }
+
     /// Counts the frame in and says how its sequence number follows.
-    fn follow(&mut self, frame: &DeviceFrame) -> Follows {
-        let (boot_id, sequence) = (frame.envelope.boot_id, frame.envelope.sequence);
+    fn follow(&mut self, envelope: &Envelope) -> Follows {
+        let (boot_id, sequence) = (envelope.boot_id, envelope.sequence);
         let is_restart = self.current.is_some() && !self.is_rejoining;
         let early = std::mem::take(&mut self.early);
         self.current = Some(boot_id);

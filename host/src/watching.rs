@@ -93,7 +93,9 @@ impl FromStr for OwnWindow {
 
     fn from_str(text: &str) -> Result<Self, WatchingError> {
         let volts = |text: &str| text.trim().parse().ok().and_then(Microvolts::try_from_volts);
-        let window = text.split_once(',').and_then(|(low, high)| Some(Window { low: volts(low)?, high: volts(high)? }));
+        let window = text
+            .split_once(',')
+            .and_then(|(low, high)| Some(Window { low: volts(low)?, high: volts(high)? }));
         match window {
             // A millivolt is the narrowest window the hysteresis can work in.
             Some(window) if window.width_uv() >= 1000 => Ok(Self(window)),

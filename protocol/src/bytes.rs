@@ -90,6 +90,13 @@ impl<const N: usize> fmt::Debug for Bytes<N> {
     }
 }
 
+#[cfg(feature = "defmt")]
+impl<const N: usize> defmt::Format for Bytes<N> {
+    fn format(&self, f: defmt::Formatter<'_>) {
+        defmt::write!(f, "{=[u8]:02x}", self.as_slice());
+    }
+}
+
 impl<const N: usize> MaxSize for Bytes<N> {
     const POSTCARD_MAX_SIZE: usize = N + if N < 128 { 1 } else { 2 };
 }

@@ -8,6 +8,7 @@ use serde::{Deserialize, Serialize};
 
 /// A request. The device answers each with a [`crate::message::Reply`], except [`Command::Acknowledge`].
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Command {
     /// Say who you are: answered by `Hello` and `Settings`.
     Identify,
@@ -35,6 +36,7 @@ pub enum Command {
 
 /// A command as it travels.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Request {
     /// Counts up with every request; the reply names it.
     pub sequence: u32,

@@ -22,9 +22,11 @@ use crate::framing::{
     CRC, CRC_BYTES, DELIMITER, DEVICE_FRAME_BYTES, DeviceFrame, Envelope, REQUEST_FRAME_BYTES,
 };
 use crate::message::Message;
+use crate::stuffing::{self, copy};
 
 /// What a decoder has seen and dropped. Counts saturate.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct DecoderCounts {
     /// Frames with a sound checksum.
     pub sound_frames: u64,
@@ -96,7 +98,7 @@ impl<const N: usize> Decoder<N> {
         let end = self.used.saturating_add(piece.len());
         match self.buffer.get_mut(self.used..end) {
             Some(slot) if !self.is_skipping => {
-                slot.copy_from_slice(piece);
+                copy(piece, slot);
                 self.used = end;
             }
             _ => {
@@ -204,7 +206,7 @@ impl RequestDecoder {
 
 /// The body of a stuffed frame, checksum verified and removed.
 fn unstuff(frame: &mut [u8]) -> Option<&[u8]> {
-    let length = cobs::decode_in_place(frame).ok()?;
+    let length = stuffing::decode_in_place(frame)?;
     let (body, checksum) = frame.get(..length)?.split_last_chunk::<CRC_BYTES>()?;
     (CRC.checksum(body) == u32::from_le_bytes(*checksum)).then_some(body)
 }

@@ -12,13 +12,16 @@
 
 use crate::command::Request;
 use crate::message::Message;
+use crate::stuffing::{self, copy};
 use core::fmt;
 use crc::{CRC_32_ISO_HDLC, Crc, Table};
 use postcard::experimental::max_size::MaxSize;
 use serde::{Deserialize, Serialize};
 
+/// Bytes of input the checksum takes at a time: each costs 1 KiB of table, scarce on a board.
+const LANES: usize = if cfg!(target_os = "none") { 1 } else { 16 };
 /// The checksum of a frame body.
-pub(crate) const CRC: Crc<u32, Table<16>> = Crc::<u32, Table<16>>::new(&CRC_32_ISO_HDLC);
+pub(crate) static CRC: Crc<u32, Table<LANES>> = Crc::<u32, Table<LANES>>::new(&CRC_32_ISO_HDLC);
 /// Bytes of the checksum.
 pub const CRC_BYTES: usize = 4;
 /// The byte that ends a frame and occurs nowhere inside it.
@@ -26,6 +29,7 @@ pub const DELIMITER: u8 = 0;
 
 /// How a message travels.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Delivery {
     /// Sent once; a loss shows in the sequence numbers.
     Passing,
@@ -38,6 +42,7 @@ pub enum Delivery {
 
 /// What precedes every message.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Envelope {
     /// Drawn at each start of the device: a change means a restart.
     pub boot_id: u32,
@@ -51,6 +56,7 @@ pub struct Envelope {
 
 /// A message with its envelope: one device-to-host frame.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct DeviceFrame {
     /// Who, when, which.
     pub envelope: Envelope,
@@ -79,6 +85,7 @@ pub const ENVELOPE_BYTES: usize = Envelope::POSTCARD_MAX_SIZE;
 
 /// Why a frame could not be written.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum EncodeError {
     /// The output holds `available` bytes; up to `needed` may be required.
     OutputTooSmall {
@@ -123,7 +130,7 @@ pub fn frame_message(envelope: &Envelope, message: &[u8], output: &mut [u8]) -> 
     let mut body = [0; DEVICE_BODY_BYTES];
     let used = postcard::to_slice(envelope, &mut body).map_err(|_| error)?.len();
     let end = used + message.len();
-    body.get_mut(used..end).ok_or(error)?.copy_from_slice(message);
+    copy(message, body.get_mut(used..end).ok_or(error)?);
     seal(&mut body, end, output).ok_or(error)
 }
 
@@ -152,12 +159,12 @@ pub fn encode_request(request: &Request, output: &mut [u8]) -> Result<usize, Enc
 fn seal(body: &mut [u8], used: usize, output: &mut [u8]) -> Option<usize> {
     let checksum = CRC.checksum(body.get(..used)?).to_le_bytes();
     let end = used + CRC_BYTES;
-    body.get_mut(used..end)?.copy_from_slice(&checksum);
+    copy(&checksum, body.get_mut(used..end)?);
     let body = body.get(..end)?;
     if output.len() < longest_encoding(body.len()) {
         return None;
     }
-    let stuffed = cobs::try_encode(body, output).ok()?;
+    let stuffed = stuffing::encode(body, output)?;
     *output.get_mut(stuffed)? = DELIMITER;
     Some(stuffed + 1)
 }

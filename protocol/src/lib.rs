@@ -20,6 +20,7 @@ pub mod message;
 pub mod power;
 pub mod receivers;
 pub mod snippet;
+mod stuffing;
 pub mod units;
 
 /// Version of the wire format: the first number of every [`message::Hello`].

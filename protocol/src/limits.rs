@@ -10,6 +10,7 @@ use serde::{Deserialize, Serialize};
 
 /// A permitted range, both ends inclusive, against the receiver's own common.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Window {
     /// Lowest permitted voltage.
     pub low: Microvolts,
@@ -36,6 +37,7 @@ impl Window {
 
 /// The windows a monitor watches at once. A window that is `None` is not judged.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct LimitSet {
     /// For each leg on its own.
     pub terminal: Option<Window>,
@@ -52,6 +54,7 @@ impl LimitSet {
 
 /// One side of one watched window. The discriminant is the bit number in [`LimitMask`]; never reorder.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 #[repr(u8)]
 pub enum Limit {
     /// Leg A above the terminal window.
@@ -89,6 +92,7 @@ impl Limit {
 
 /// A set of [`Limit`]s, one bit each (bit number = discriminant).
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 #[serde(transparent)]
 pub struct LimitMask(u8);
 

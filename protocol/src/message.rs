@@ -17,6 +17,7 @@ pub const NAME_BYTES: usize = 24;
 
 /// Everything a device sends, behind an [`crate::framing::Envelope`].
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Message {
     /// Who speaks: sent at start and on request.
     Hello(Hello),
@@ -48,6 +49,7 @@ pub enum Message {
 
 /// Who speaks.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Hello {
     /// [`crate::WIRE_VERSION`] of the device.
     pub wire_version: u16,
@@ -69,6 +71,7 @@ pub struct Hello {
 
 /// Why the device started.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum ResetCause {
     /// Not known to the board.
     #[default]
@@ -88,6 +91,7 @@ pub enum ResetCause {
 /// How the codes of one leg become microvolts:
 /// `µV = ((code * mantissa + 2^(shift-1)) >> shift) + offset_uv`, in 64-bit arithmetic, then bounded to ±1000 V.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct LegScale {
     /// Microvolts per code times 2^`shift`.
     pub mantissa: i32,
@@ -132,6 +136,7 @@ impl LegScale {
 
 /// What is being watched for, and how.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Settings {
     /// The receiver the limits were taken from.
     pub receiver: ReceiverId,
@@ -145,6 +150,7 @@ pub struct Settings {
 
 /// How excursions are told apart and when they are reported one by one.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Detection {
     /// An open excursion closes only when every watched quantity is this far inside its window.
     pub hysteresis_uv: u32,
@@ -164,6 +170,7 @@ pub struct Detection {
 
 /// How often readings are reported. All lengths are multiples of the device's block.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Reporting {
     /// Pairs per [`Summary`].
     pub summary_samples: u32,
@@ -183,6 +190,7 @@ pub struct Reporting {
 
 /// One interval of readings. Spans are inclusive extremes; all are empty when `samples` is 0.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Summary {
     /// First pair of the interval.
     pub first_sample: u64,
@@ -210,6 +218,7 @@ pub struct Summary {
 
 /// Which part of an excursion a record holds.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Part {
     /// All of it.
     #[default]
@@ -224,6 +233,7 @@ pub enum Part {
 
 /// A stretch of samples outside a limit: from the first sample outside to the last.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Excursion {
     /// Number since the start, from 1. Parts of one excursion share it.
     pub number: u64,
@@ -243,6 +253,7 @@ pub struct Excursion {
 
 /// What happened while outside; the same for one excursion and for a storm of them.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Breach {
     /// Every limit broken.
     pub limits: LimitMask,
@@ -265,6 +276,7 @@ pub struct Breach {
 
 /// Excursions of one storm window beyond those reported one by one.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Storm {
     /// How many excursions are in here.
     pub excursions: u32,
@@ -281,6 +293,7 @@ pub struct Storm {
 /// Part of the raw waveform around an excursion. Parts of one snippet are numbered from 0 and hold
 /// whole [`crate::snippet`] blocks, so each can be decoded on its own.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct SnippetPart {
     /// Excursion that triggered it.
     pub excursion: u64,
@@ -298,6 +311,7 @@ pub struct SnippetPart {
 
 /// Why samples are missing.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum GapCause {
     /// The sampler produced faster than they were taken away.
     Overrun,
@@ -311,6 +325,7 @@ pub enum GapCause {
 
 /// Samples that were not examined.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Gap {
     /// First missing pair.
     pub first_sample: u64,
@@ -322,6 +337,7 @@ pub struct Gap {
 
 /// One level of the differential mode and how much of the interval was spent there.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Level {
     /// Differential mode, microvolts.
     pub dm_uv: i32,
@@ -331,6 +347,7 @@ pub struct Level {
 
 /// Signal levels of one interval: three states, because a bus rests between driven levels.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Levels {
     /// First pair of the interval.
     pub first_sample: u64,
@@ -354,6 +371,7 @@ pub struct Levels {
 
 /// The common mode while the pair stays in one state.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Plateau {
     /// Settled pairs in that state (the pair before was in it too).
     pub samples: u32,
@@ -363,6 +381,7 @@ pub struct Plateau {
 
 /// Which signal a spectrum is of.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Mode {
     /// (VA+VB)/2.
     Common,
@@ -373,6 +392,7 @@ pub enum Mode {
 /// Part of one averaged spectrum: one-sided power spectral density in V²/Hz, Hann window (periodic),
 /// mean removed per segment, 50 % overlap unless segments were skipped.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct SpectrumPart {
     /// First pair of the first segment.
     pub first_sample: u64,
@@ -396,6 +416,7 @@ pub struct SpectrumPart {
 
 /// A value and the sample at which it was first reached.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Moment {
     /// The value, in the unit of the quantity.
     pub value: i32,
@@ -405,6 +426,7 @@ pub struct Moment {
 
 /// Lowest and highest value since the start, with their moments.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Extremes {
     /// The lowest.
     pub low: Moment,
@@ -431,6 +453,7 @@ impl Default for Extremes {
 
 /// Counts and extremes since the start. The last one received is the whole account.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Totals {
     /// First pair that was examined.
     pub first_sample: u64,
@@ -462,6 +485,7 @@ pub struct Totals {
 
 /// Kept messages the device had to give up because its outbox was full. Counts since the start.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Loss {
     /// Snippet parts.
     pub snippet_parts: u32,
@@ -471,6 +495,7 @@ pub struct Loss {
 
 /// Answer to a command.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Reply {
     /// Sequence number of the command.
     pub to: u32,
@@ -480,6 +505,7 @@ pub struct Reply {
 
 /// What became of a command.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Outcome {
     /// Done.
     Done,
@@ -491,6 +517,7 @@ pub enum Outcome {
 
 /// Why the stream ends.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum EndCause {
     /// The source has no more samples.
     SourceExhausted,
@@ -500,6 +527,7 @@ pub enum EndCause {
 
 /// The last message of a run: everything before it has been said.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct End {
     /// Why.
     pub cause: EndCause,

@@ -11,6 +11,7 @@ use serde::{Deserialize, Serialize};
 
 /// Names a row of [`TABLE`]. Wire format: append, never reorder.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Hash, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 #[repr(u8)]
 pub enum ReceiverId {
     /// TIA/EIA-485-A.
@@ -46,6 +47,7 @@ pub enum ReceiverId {
 
 /// Whether a number was read somewhere or only remembered.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Standing {
     /// Read in the named source.
     Seen,
@@ -55,6 +57,7 @@ pub enum Standing {
 
 /// A figure with where it comes from.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Sourced<T> {
     /// The figure.
     pub value: T,
@@ -67,6 +70,7 @@ pub struct Sourced<T> {
 /// Differential input that a receiver need not decide, in millivolts: below `low` one state, above
 /// `high` the other.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Threshold {
     /// At or below: the low (recessive) state.
     pub low_mv: i32,
@@ -76,6 +80,7 @@ pub struct Threshold {
 
 /// What a differential voltage means to a receiver.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Decision {
     /// At or below the lower threshold.
     Low,
@@ -101,6 +106,7 @@ impl Threshold {
 
 /// One interface.
 #[derive(Clone, Copy, Debug)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Receiver {
     /// Its wire number.
     pub id: ReceiverId,

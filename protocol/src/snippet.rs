@@ -35,6 +35,7 @@ pub const fn longest_block_bytes(code_bits: usize, pairs: usize) -> usize {
 
 /// Why a block could not be read.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum BlockError {
     /// The bytes end inside a block.
     Truncated,

@@ -12,6 +12,7 @@ use serde::{Deserialize, Deserializer, Serialize};
 ///
 /// Reading one from a wire or a file refuses values beyond the bound.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, PartialOrd, Ord, Serialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 #[serde(transparent)]
 pub struct Microvolts(i32);
 
@@ -77,6 +78,7 @@ impl<'de> Deserialize<'de> for Microvolts {
 
 /// Lowest and highest value seen of one quantity, both inclusive. Empty until something is seen.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Span {
     /// Lowest value seen.
     pub low: i32,

@@ -5,7 +5,9 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
 pub mod boards;
+pub mod emulator;
 pub mod recorder;
+pub mod replay;
 pub mod rule;
 pub mod sources;
 pub mod waveforms;

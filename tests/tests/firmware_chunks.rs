@@ -15,6 +15,7 @@ use legwise_tests::recorder::{Record, Recorder};
 use legwise_tests::sources::HoledSource;
 use legwise_tests::waveforms::{Data, dice, noise};
 use proptest::prelude::*;
+use proptest::test_runner::RngSeed;
 use rand::RngExt;
 
 const PAIRS: usize = 9_000;
@@ -126,7 +127,7 @@ fn deliveries() -> impl Strategy<Value = Vec<usize>> {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig { cases: 200, failure_persistence: None, ..ProptestConfig::default() })]
+    #![proptest_config(ProptestConfig { cases: 200, failure_persistence: None, rng_seed: RngSeed::Fixed(1), ..ProptestConfig::default() })]
 
     #[test]
     fn any_cut_into_deliveries_gives_the_same_records(
@@ -166,7 +167,8 @@ fn run_device(
     let mut drains = drains.iter().copied().cycle();
     loop {
         let step = monitor.step().unwrap();
-        let take = drains.next().unwrap();
+        // At the end the host takes everything; before that, as little as the pattern says.
+        let take = if step == Step::Finished { usize::MAX } else { drains.next().unwrap() };
         let bytes: Vec<u8> = (0..take).map_while(|_| monitor.link_mut().take_sent()).collect();
         decoder.feed_frames(&bytes, |frame| frames.push(frame));
         if step == Step::Finished && bytes.is_empty() {
@@ -199,7 +201,7 @@ fn assert_whole(frames: &[DeviceFrame], expected: &[Record]) {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig { cases: 60, failure_persistence: None, ..ProptestConfig::default() })]
+    #![proptest_config(ProptestConfig { cases: 60, failure_persistence: None, rng_seed: RngSeed::Fixed(1), ..ProptestConfig::default() })]
 
     #[test]
     fn a_device_says_the_same_whatever_its_source_and_link_cut(

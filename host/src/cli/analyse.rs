@@ -6,6 +6,7 @@ use crate::board::VirtualBoard;
 use crate::log::Origin;
 use crate::recording;
 use crate::session::Session;
+use anyhow::Context;
 use legwise_firmware::source::PairSource;
 
 /// Boot id of a recording: there is no device that could draw one.
@@ -33,7 +34,11 @@ pub(super) fn run(arguments: &AnalyseArguments) -> anyhow::Result<Exit> {
         bar.set_position(source.progress().0);
     });
     bar.finish_and_clear();
-    outcome?;
+    // A log the user asked for is finished even when the recording breaks off.
     let log = session.finish()?;
+    outcome.with_context(|| match &arguments.output {
+        Some(path) => format!("broke off; what came before is kept in {}", path.display()),
+        None => "broke off; give -o to keep what comes before".to_owned(),
+    })?;
     tables::print_report(&log, arguments.json.json, arguments.verdict_code)
 }

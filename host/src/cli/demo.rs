@@ -40,7 +40,8 @@ pub(super) fn run(arguments: &DemoArguments) -> anyhow::Result<Exit> {
     let source = LineSource::new(&scenario, arguments.seed, Length::Pairs(pairs))?;
     let settings = watching.settings(source.describe().sample_rate_mhz);
     let (log_path, report_path) = free_paths(arguments)?;
-    let about = stream::about(Origin::Simulated, &scenario.title, Some("simulated monitor on the simulated pair"));
+    let about =
+        stream::about(Origin::Simulated, &scenario.title, Some("simulated monitor on the simulated pair"));
     let log = Log::create(&log_path, &about)?;
 
     terminal::print(&format!("{}\n{}\n", scenario.title, scenario.description.trim()))?;
@@ -73,13 +74,15 @@ pub(super) fn run(arguments: &DemoArguments) -> anyhow::Result<Exit> {
 /// Paths that do not exist yet, so that no earlier run is lost.
 fn free_paths(arguments: &DemoArguments) -> anyhow::Result<(PathBuf, PathBuf)> {
     let name = Path::new(&arguments.scenario).file_stem().unwrap_or_default().to_string_lossy();
-    std::fs::create_dir_all(&arguments.folder)
-        .with_context(|| format!("could not make the folder {}; try another --folder", arguments.folder.display()))?;
+    std::fs::create_dir_all(&arguments.folder).with_context(|| {
+        format!("could not make the folder {}; try another --folder", arguments.folder.display())
+    })?;
     let path = |number: u32, ending: &str| {
         let number = if number == 1 { String::new() } else { format!("-{number}") };
         arguments.folder.join(format!("{name}{number}.{ending}"))
     };
-    let number = (1..).find(|&number| !path(number, "lwlog").exists() && !path(number, "txt").exists()).unwrap_or(1);
+    let number =
+        (1..).find(|&number| !path(number, "lwlog").exists() && !path(number, "txt").exists()).unwrap_or(1);
     Ok((path(number, "lwlog"), path(number, "txt")))
 }
 
@@ -112,7 +115,10 @@ fn record(
     let has_run = runner.join().is_ok();
     bar.finish_and_clear();
     outcome?;
-    anyhow::ensure!(has_run, "the simulated board stopped unexpectedly; try another --seed and tell us this one");
+    anyhow::ensure!(
+        has_run,
+        "the simulated board stopped unexpectedly; try another --seed and tell us this one"
+    );
     Ok(session.finish()?)
 }
 

@@ -53,14 +53,44 @@ impl From<Exit> for ExitCode {
     }
 }
 
+/// Arguments that are well formed but of no use.
+#[derive(Clone, Copy, Debug, PartialEq, thiserror::Error)]
+pub enum UsageError {
+    /// No time to simulate, or more than anyone has.
+    #[error("could not simulate {seconds} s; try a length from one sample up")]
+    Length {
+        /// What was asked for.
+        seconds: f64,
+    },
+    /// Nowhere to write to.
+    #[error(
+        "could not write the recording: no file was named; try -o FILE with a name that ends in .csv or .wav"
+    )]
+    NoOutput,
+}
+
 /// Prints what went wrong, unless it was only a reader that went away; the exit code.
 pub fn explain(error: &anyhow::Error) -> Exit {
     let exit = classify(error);
     if exit != Exit::Done {
         // Nothing can be done when even the error output is closed.
-        let _ = io::Write::write_all(&mut io::stderr(), format!("legwise: {error:#}\n").as_bytes());
+        let _ = io::Write::write_all(&mut io::stderr(), format!("legwise: {}\n", sentence(error)).as_bytes());
     }
     exit
+}
+
+/// The error, with those of its causes that it does not name itself in brackets.
+fn sentence(error: &anyhow::Error) -> String {
+    if error.chain().len() == 1 && error.is::<io::Error>() {
+        return format!("could not write to the standard output: {error}; try another place for it");
+    }
+    let mut text = error.to_string();
+    for cause in error.chain().skip(1).map(ToString::to_string) {
+        if !text.contains(&cause) {
+            text.push_str(&format!(" ({cause})"));
+        }
+    }
+    text
 }
 
 fn classify(error: &anyhow::Error) -> Exit {
@@ -71,14 +101,21 @@ fn classify(error: &anyhow::Error) -> Exit {
                 _ => Exit::Storage,
             };
         }
+        if matches!(cause.downcast_ref(), Some(RecordingError::UnknownFormat { .. })) {
+            return Exit::Usage;
+        }
         if let Some(error) = cause.downcast_ref::<RecordingError>() {
             return if error.is_about_writing() { Exit::Storage } else { Exit::Input };
         }
         if let Some(error) = cause.downcast_ref::<LogError>() {
             return if error.is_about_storing() { Exit::Storage } else { Exit::Input };
         }
-        if cause.is::<ExportError>() {
-            return Exit::Storage;
+        if let Some(error) = cause.downcast_ref::<ExportError>() {
+            return match error {
+                ExportError::UnknownTable { .. } => Exit::Usage,
+                ExportError::Log(_) => Exit::Input,
+                ExportError::Exists { .. } | ExportError::Write { .. } => Exit::Storage,
+            };
         }
         if cause.is::<ReportError>() || cause.is::<ScenarioError>() {
             return Exit::Input;
@@ -86,7 +123,7 @@ fn classify(error: &anyhow::Error) -> Exit {
         if cause.is::<PortError>() {
             return Exit::Port;
         }
-        if cause.is::<WatchingError>() {
+        if cause.is::<WatchingError>() || cause.is::<UsageError>() {
             return Exit::Usage;
         }
     }

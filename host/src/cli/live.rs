@@ -35,7 +35,8 @@ impl LiveView {
 
     /// How many event lines were only counted, as a sentence; `None` when none.
     pub fn unprinted(&self) -> Option<String> {
-        (self.unprinted > 0).then(|| format!("... and {} more events, all in the log", figures::count(self.unprinted)))
+        (self.unprinted > 0)
+            .then(|| format!("... and {} more events, all in the log", figures::count(self.unprinted)))
     }
 
     /// One line of state.
@@ -143,7 +144,11 @@ impl LiveView {
 /// Which limits were broken and how far it went.
 fn breach(breach: &Breach) -> String {
     let clipped = if breach.clipped_samples > 0 { " or more (clipped)" } else { "" };
-    format!("{} reached {}{clipped}", limit_names(breach.limits), figures::volts_signed(f64::from(breach.extreme_twice_uv) * 0.5e-6))
+    format!(
+        "{} reached {}{clipped}",
+        limit_names(breach.limits),
+        figures::volts_signed(f64::from(breach.extreme_twice_uv) * 0.5e-6)
+    )
 }
 
 fn limit_names(limits: LimitMask) -> String {

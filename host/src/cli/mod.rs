@@ -98,7 +98,7 @@ struct DemoArguments {
     #[arg(long, value_name = "NAME", default_value = demo::DEFAULT_SCENARIO)]
     scenario: String,
     /// Minutes of bus time to run
-    #[arg(long, value_name = "N", default_value_t = demo::DEFAULT_MINUTES)]
+    #[arg(long, value_name = "N", default_value_t = demo::DEFAULT_MINUTES, allow_negative_numbers = true)]
     minutes: f64,
     /// Seed of everything random
     #[arg(long, value_name = "N", default_value_t = 1)]
@@ -192,10 +192,10 @@ struct SimulateArguments {
     /// Scenario by name or as a TOML file; 'list' lists the built-in ones
     scenario: String,
     /// Recording to write, .csv or .wav
-    #[arg(short, long, value_name = "FILE", required_unless_present = "print", default_value = "")]
-    output: PathBuf,
+    #[arg(short, long, value_name = "FILE")]
+    output: Option<PathBuf>,
     /// Seconds of bus time
-    #[arg(long, value_name = "N", default_value_t = 10.0)]
+    #[arg(long, value_name = "N", default_value_t = 10.0, allow_negative_numbers = true)]
     seconds: f64,
     /// Seed of everything random
     #[arg(long, value_name = "N", default_value_t = 1)]

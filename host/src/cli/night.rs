@@ -3,7 +3,7 @@
 use super::failure::Exit;
 use super::live::LiveView;
 use super::{LogArguments, stream, terminal};
-use crate::log::{Arrival, Log, Origin};
+use crate::log::{Arrival, Log, LogError, Origin};
 use crate::port::BoardPort;
 use crate::report::{Options, Report};
 use crate::session::Session;
@@ -22,8 +22,6 @@ use std::time::{Duration, Instant};
 const ASK_AGAIN: Duration = Duration::from_secs(1);
 /// How long a stopped board may take to finish its last words.
 const LAST_WORDS: Duration = Duration::from_secs(2);
-/// How often what arrived is made durable and acknowledged.
-const STORE_EVERY: Duration = Duration::from_secs(1);
 
 pub(super) fn run(arguments: &LogArguments) -> anyhow::Result<Exit> {
     let watching = arguments.watching.choose(None)?;
@@ -33,7 +31,8 @@ pub(super) fn run(arguments: &LogArguments) -> anyhow::Result<Exit> {
     let log = Log::create(&path, &about)?;
     let stop = Arc::new(AtomicBool::new(false));
     let flag = Arc::clone(&stop);
-    ctrlc::set_handler(move || flag.store(true, Ordering::SeqCst)).context("could not catch Ctrl-C; try again")?;
+    ctrlc::set_handler(move || flag.store(true, Ordering::SeqCst))
+        .context("could not catch Ctrl-C; try again")?;
 
     terminal::print(&format!("logging {} into {}; Ctrl-C ends it", arguments.port, path.display()))?;
     if arguments.point.is_none() {
@@ -43,7 +42,14 @@ pub(super) fn run(arguments: &LogArguments) -> anyhow::Result<Exit> {
     let mut recorder = Recorder::new(port, Session::new(log), watching);
     let outcome = recorder.record(&bar, &stop);
     bar.finish_and_clear();
+    let was_silent = recorder.boot_id.is_none();
     let log = recorder.session.finish()?;
+    if was_silent {
+        terminal::print(&format!(
+            "no board introduced itself on {}; try its power, the cable, and --baud",
+            arguments.port
+        ))?;
+    }
     match outcome {
         Ok(()) => summarise(&log, &path, arguments.verdict_code),
         Err(error) => {
@@ -76,26 +82,35 @@ struct Recorder {
     /// Sequence number of the command that sets the limits, once sent.
     limits_sent: Option<u32>,
     has_ended: bool,
+    /// Whether the last attempt to store failed.
+    is_storage_failing: bool,
 }
 
 impl Recorder {
     fn new(port: BoardPort, session: Session, watching: Watching) -> Self {
-        Self { port, session, watching, view: LiveView::default(), boot_id: None, limits_sent: None, has_ended: false }
+        Self {
+            port,
+            session,
+            watching,
+            view: LiveView::default(),
+            boot_id: None,
+            limits_sent: None,
+            has_ended: false,
+            is_storage_failing: false,
+        }
     }
 
     /// Records until `stop`, then asks the board to finish.
     fn record(&mut self, bar: &ProgressBar, stop: &AtomicBool) -> anyhow::Result<()> {
-        let (mut last_asked, mut last_stored) = (None::<Instant>, Instant::now());
+        let mut last_asked = None::<Instant>;
         while !stop.load(Ordering::SeqCst) && !self.has_ended {
-            if self.boot_id.is_none() && last_asked.is_none_or(|asked| asked.elapsed() >= ASK_AGAIN) {
+            let is_unknown =
+                self.boot_id.is_none() && last_asked.is_none_or(|asked| asked.elapsed() >= ASK_AGAIN);
+            if is_unknown || self.session.wants_identify(now()) {
                 self.port.command(Command::Identify)?;
                 last_asked = Some(Instant::now());
             }
             self.listen(bar)?;
-            if last_stored.elapsed() >= STORE_EVERY {
-                self.store()?;
-                last_stored = Instant::now();
-            }
             bar.set_message(if self.boot_id.is_none() {
                 "waiting for the board to introduce itself".to_owned()
             } else {
@@ -114,9 +129,11 @@ impl Recorder {
                 self.listen(bar)?;
             }
         }
-        self.store()?;
+        let outcome = self.session.flush();
+        self.note_storage(outcome, bar)?;
+        self.acknowledge()?;
         if let Some(line) = self.view.unprinted() {
-            terminal::print_above(bar, &line)?;
+            say(bar, &line);
         }
         Ok(())
     }
@@ -125,7 +142,8 @@ impl Recorder {
     fn listen(&mut self, bar: &ProgressBar) -> anyhow::Result<()> {
         let mut buffer = [0; 4096];
         let count = self.port.read(&mut buffer)?;
-        let Some(bytes) = buffer.get(..count).filter(|bytes| !bytes.is_empty()) else { return Ok(()) };
+        // Without bytes too: commits must stay timely on a silent line.
+        let bytes = buffer.get(..count).unwrap_or(&[]);
         let mut lines = Vec::new();
         let mut heard = Heard::default();
         let view = &mut self.view;
@@ -133,10 +151,12 @@ impl Recorder {
             heard.note(frame);
             lines.extend(view.line(frame));
         };
-        self.session.receive(bytes, now(), &mut on_frame)?;
+        let outcome = self.session.receive(bytes, now(), &mut on_frame);
+        self.note_storage(outcome, bar)?;
+        self.acknowledge()?;
         self.answer(heard, &mut lines)?;
         for line in lines {
-            terminal::print_above(bar, &line)?;
+            say(bar, &line);
         }
         Ok(())
     }
@@ -144,32 +164,61 @@ impl Recorder {
     /// Sends what the board must be told after what was heard.
     fn answer(&mut self, heard: Heard, lines: &mut Vec<String>) -> anyhow::Result<()> {
         self.has_ended |= heard.has_ended;
-        if let Some(hello) = heard.hello {
-            if self.boot_id != Some(heard.boot_id) {
-                let verb = if self.boot_id.is_none() { "introduced itself" } else { "has restarted" };
-                lines.push(format!("board '{}' {verb}", hello.board.as_text()));
-                self.boot_id = Some(heard.boot_id);
-                let (receiver, limits) = self.watching.on_wire();
-                self.limits_sent = Some(self.port.command(Command::WatchLimits { receiver, limits })?);
-            }
+        if let Some(hello) = heard.hello
+            && self.boot_id != Some(heard.boot_id)
+        {
+            let verb = if self.boot_id.is_none() { "introduced itself" } else { "has restarted" };
+            lines.push(format!("board '{}' {verb}", hello.board.as_text()));
+            self.boot_id = Some(heard.boot_id);
+            let (receiver, limits) = self.watching.on_wire();
+            self.limits_sent = Some(self.port.command(Command::WatchLimits { receiver, limits })?);
         }
         match heard.reply {
             Some(Reply { to, outcome }) if Some(to) == self.limits_sent && outcome != Outcome::Done => {
-                lines.push("the board refused the limits asked for; its own stay in force, see the report".to_owned());
+                lines.push(
+                    "the board refused the limits asked for; its own stay in force, see the report"
+                        .to_owned(),
+                );
             }
             _ => {}
         }
         Ok(())
     }
 
-    /// Makes what arrived durable, then tells the board that it may forget it.
-    fn store(&mut self) -> anyhow::Result<()> {
-        self.session.flush()?;
+    /// Tells the board what it may forget: what is durable.
+    fn acknowledge(&mut self) -> anyhow::Result<()> {
         if let Some(through) = self.session.acknowledgement() {
             self.port.command(Command::Acknowledge { through })?;
         }
         Ok(())
     }
+
+    /// A full disk is no reason to stop listening: what arrives waits in memory and on the board, and
+    /// every commit tries again. Said once; any other failure ends the run.
+    fn note_storage(&mut self, outcome: Result<(), LogError>, bar: &ProgressBar) -> anyhow::Result<()> {
+        match outcome {
+            Ok(()) => {
+                if self.is_storage_failing && self.session.flush().is_ok() {
+                    self.is_storage_failing = false;
+                    say(bar, "storing works again; nothing that arrived meanwhile is lost");
+                }
+                Ok(())
+            }
+            Err(error @ (LogError::DiskFull | LogError::Busy)) => {
+                if !std::mem::replace(&mut self.is_storage_failing, true) {
+                    say(bar, &format!("{error}; going on, what arrives waits in memory"));
+                }
+                Ok(())
+            }
+            Err(error) => Err(error.into()),
+        }
+    }
+}
+
+/// Prints a line above the state. A reader that went away must not end a night: then the log alone
+/// goes on.
+fn say(bar: &ProgressBar, line: &str) {
+    let _ = terminal::print_above(bar, line);
 }
 
 /// What matters in a handful of frames.

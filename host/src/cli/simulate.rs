@@ -1,6 +1,6 @@
 //! `simulate`: a scenario to a recording.
 
-use super::failure::Exit;
+use super::failure::{Exit, UsageError};
 use super::{SimulateArguments, terminal};
 use crate::line::{Length, LineSource, Scenario, ScenarioError, scenarios};
 use crate::recording;
@@ -16,6 +16,7 @@ pub(super) fn run(arguments: &SimulateArguments) -> anyhow::Result<Exit> {
         return Ok(Exit::Done);
     }
     let scenario = load(&arguments.scenario)?;
+    let output = arguments.output.as_deref().ok_or(UsageError::NoOutput)?;
     let rate_hz = scenario.sample_rate_hz;
     let pairs = pairs_in(arguments.seconds, rate_hz)?;
     let mut source = LineSource::new(&scenario, arguments.seed, Length::Pairs(pairs))?;
@@ -25,10 +26,10 @@ pub(super) fn run(arguments: &SimulateArguments) -> anyhow::Result<Exit> {
         pairs: Some(pairs),
         ..recording::WriteOptions::default()
     };
-    let written = recording::write(&arguments.output, &mut source, &about)?;
+    let written = recording::write(output, &mut source, &about)?;
     terminal::print(&format!(
         "{}: {} pairs at {} ({})",
-        arguments.output.display(),
+        output.display(),
         figures::count(written.pairs),
         figures::pair_rate(rate_hz),
         figures::span(written.pairs as f64 / rate_hz),
@@ -53,13 +54,9 @@ pub(super) fn load(name: &str) -> Result<Scenario, ScenarioError> {
 }
 
 /// Pairs in a stretch of time.
-pub(super) fn pairs_in(seconds: f64, rate_hz: f64) -> Result<u64, ScenarioError> {
+pub(super) fn pairs_in(seconds: f64, rate_hz: f64) -> Result<u64, UsageError> {
     let pairs = seconds * rate_hz;
-    if pairs >= 1.0 && pairs < 1e15 {
-        return Ok(pairs.round() as u64);
-    }
-    let (reason, remedy) = ("it is not a usable length of time", "a length of at least one sample");
-    Err(ScenarioError::value("length in seconds", seconds, reason, remedy))
+    if (1.0..1e15).contains(&pairs) { Ok(pairs.round() as u64) } else { Err(UsageError::Length { seconds }) }
 }
 
 fn source_text(name: &str) -> Result<String, ScenarioError> {
@@ -69,6 +66,11 @@ fn source_text(name: &str) -> Result<String, ScenarioError> {
     let path = Path::new(name);
     std::fs::read_to_string(path).map_err(|error| {
         let remedy = "'legwise simulate list' for the built-in ones, or the path of a TOML file";
-        ScenarioError::value("scenario", name, format!("no built-in scenario and no readable file ({error})"), remedy)
+        ScenarioError::value(
+            "scenario",
+            name,
+            format!("no built-in scenario and no readable file ({error})"),
+            remedy,
+        )
     })
 }

@@ -15,7 +15,11 @@ pub(super) fn report(arguments: &ReportArguments) -> anyhow::Result<Exit> {
 /// Prints the report of a log.
 pub(super) fn print_report(log: &Log, is_json: bool, is_verdict_code: bool) -> anyhow::Result<Exit> {
     let report = Report::from_log(log, &Options::default())?;
-    let text = if is_json { report::json::render(&report)? } else { report::text::render(&report, terminal::style()) };
+    let text = if is_json {
+        report::json::render(&report)?
+    } else {
+        report::text::render(&report, terminal::style())
+    };
     terminal::print(&text)?;
     Ok(Exit::of_verdict(report.verdict, is_verdict_code))
 }
@@ -25,7 +29,11 @@ pub(super) fn receivers(arguments: &ReceiversArguments) -> anyhow::Result<Exit> 
         Some(Watching::Receiver(receiver)) => Some(receiver),
         _ => None,
     };
-    let text = if arguments.json.json { receiver_table::json(receiver)? } else { receiver_table::text(receiver, terminal::style()) };
+    let text = if arguments.json.json {
+        receiver_table::json(receiver)?
+    } else {
+        receiver_table::text(receiver, terminal::style())
+    };
     terminal::print(&text)?;
     Ok(Exit::Done)
 }

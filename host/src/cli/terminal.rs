@@ -28,15 +28,23 @@ pub fn print(text: &str) -> io::Result<()> {
 /// A bar over `total` units of work, on the error output; hidden when that is no terminal.
 pub fn progress_bar(total: u64, unit: &str) -> ProgressBar {
     let bar = ProgressBar::with_draw_target(Some(total), ProgressDrawTarget::stderr_with_hz(8));
-    let template = format!("{{msg}} [{{bar:30}}] {{percent}} % of {unit}, {{elapsed}} so far, about {{eta}} left");
-    bar.set_style(ProgressStyle::with_template(&template).unwrap_or_else(|_| ProgressStyle::default_bar()).progress_chars("#>-"));
+    let template =
+        format!("{{msg}} [{{bar:30}}] {{percent}} % of {unit}, {{elapsed}} so far, about {{eta}} left");
+    bar.set_style(
+        ProgressStyle::with_template(&template)
+            .unwrap_or_else(|_| ProgressStyle::default_bar())
+            .progress_chars("#>-"),
+    );
     bar
 }
 
 /// A line that tells the state of something without an end.
 pub fn state_line() -> ProgressBar {
     let bar = ProgressBar::with_draw_target(None, ProgressDrawTarget::stderr_with_hz(4));
-    bar.set_style(ProgressStyle::with_template("{elapsed_precise}  {msg}").unwrap_or_else(|_| ProgressStyle::default_spinner()));
+    bar.set_style(
+        ProgressStyle::with_template("{elapsed_precise}  {msg}")
+            .unwrap_or_else(|_| ProgressStyle::default_spinner()),
+    );
     bar.enable_steady_tick(Duration::from_millis(500));
     bar
 }

@@ -12,7 +12,7 @@ pub(crate) fn write_csv<S: PairSource>(
     with_time: bool,
 ) -> Result<(), RecordingError> {
     let part = blocks.part;
-    let refuse = |error| RecordingError::from_io(part, error);
+    let refuse = |error| RecordingError::from_io_writing(part, error);
     let [scale_a, scale_b] = blocks.description.legs;
     let rate_mhz = u128::from(blocks.description.sample_rate_mhz.max(1));
     let header: &[u8] = if with_time { b"time_s,leg_a_v,leg_b_v\n" } else { b"leg_a_v,leg_b_v\n" };

@@ -13,8 +13,8 @@ pub enum RecordingError {
         /// The file.
         path: PathBuf,
     },
-    /// The file may not be read or written by this user.
-    #[error("could not open {}: permission denied; try another directory, or change the file's permissions", path.display())]
+    /// The file may not be read by this user.
+    #[error("could not open {}: permission denied; try a copy, or change the file's permissions", path.display())]
     PermissionDenied {
         /// The file.
         path: PathBuf,
@@ -25,8 +25,8 @@ pub enum RecordingError {
         /// The directory.
         path: PathBuf,
     },
-    /// The operating system reports another failure.
-    #[error("could not read or write {}: {source}; try copying the file to a local disk", path.display())]
+    /// The operating system reports another failure while reading.
+    #[error("could not read {}: {source}; try copying the file to a local disk", path.display())]
     Io {
         /// The file.
         path: PathBuf,
@@ -233,6 +233,26 @@ pub enum RecordingError {
         /// The file.
         path: PathBuf,
     },
+    /// A recording is to go into a directory that is not there.
+    #[error("could not make {}: there is no such directory; try another one, or make it first", path.display())]
+    NoDirectory {
+        /// The file.
+        path: PathBuf,
+    },
+    /// The directory may not be written by this user.
+    #[error("could not make {}: permission denied; try another directory, or ask its owner for access", path.display())]
+    CannotMake {
+        /// The file.
+        path: PathBuf,
+    },
+    /// The operating system reports another failure while writing.
+    #[error("could not write {}: {source}; try another disk, or a shorter recording", path.display())]
+    Writing {
+        /// The part file.
+        path: PathBuf,
+        /// What the operating system says.
+        source: io::Error,
+    },
     /// No space left; what was written so far stays in the part file.
     #[error("could not finish {}: the disk is full; try freeing space or another disk, and remove the part file", path.display())]
     DiskFull {
@@ -291,6 +311,9 @@ impl RecordingError {
         matches!(
             self,
             Self::Exists { .. }
+                | Self::NoDirectory { .. }
+                | Self::CannotMake { .. }
+                | Self::Writing { .. }
                 | Self::DiskFull { .. }
                 | Self::GapWithoutTime { .. }
                 | Self::WavTooLong { .. }
@@ -300,15 +323,25 @@ impl RecordingError {
         )
     }
 
-    /// The error for what the operating system says about `path`.
+    /// The error for what the operating system says about reading `path`.
     pub fn from_io(path: &Path, source: io::Error) -> Self {
         let path = path.to_path_buf();
         match source.kind() {
             io::ErrorKind::NotFound => Self::NotFound { path },
             io::ErrorKind::PermissionDenied => Self::PermissionDenied { path },
             io::ErrorKind::IsADirectory => Self::IsDirectory { path },
-            io::ErrorKind::StorageFull | io::ErrorKind::QuotaExceeded => Self::DiskFull { path },
             _ => Self::Io { path, source },
+        }
+    }
+
+    /// The error for what the operating system says about writing `path`.
+    pub(crate) fn from_io_writing(path: &Path, source: io::Error) -> Self {
+        let path = path.to_path_buf();
+        match source.kind() {
+            io::ErrorKind::NotFound | io::ErrorKind::NotADirectory => Self::NoDirectory { path },
+            io::ErrorKind::PermissionDenied | io::ErrorKind::ReadOnlyFilesystem => Self::CannotMake { path },
+            io::ErrorKind::StorageFull | io::ErrorKind::QuotaExceeded => Self::DiskFull { path },
+            _ => Self::Writing { path, source },
         }
     }
 
@@ -326,7 +359,7 @@ impl RecordingError {
     /// The error for what the WAV writer says about `path`.
     pub(crate) fn from_wav_writing(path: &Path, source: hound::Error) -> Self {
         match source {
-            hound::Error::IoError(error) => Self::from_io(path, error),
+            hound::Error::IoError(error) => Self::from_io_writing(path, error),
             source => Self::WavWriting { path: path.into(), source },
         }
     }

@@ -110,7 +110,7 @@ pub fn write<S: PairSource>(
         _ => return Err(RecordingError::UnknownFormat { path: path.into() }),
     };
     if path.is_dir() {
-        return Err(RecordingError::IsDirectory { path: path.into() });
+        return Err(RecordingError::Exists { path: path.into() });
     }
     let sidecar_path = Sidecar::path_of(path);
     if !options.replace
@@ -124,7 +124,7 @@ pub fn write<S: PairSource>(
         plan.check_length(path, pairs)?;
     }
     let part = with_suffix(path, ".part");
-    let create = File::create(&part).map_err(|error| RecordingError::from_io(&part, error))?;
+    let create = File::create(&part).map_err(|error| RecordingError::from_io_writing(&part, error))?;
     let mut output = BufWriter::with_capacity(WRITE_BYTES, create);
     let mut blocks = Blocks::new(source, &part);
     let largest_error_uv = match &plan {
@@ -137,7 +137,8 @@ pub fn write<S: PairSource>(
     let sidecar = describe(&description, plan.as_ref(), options);
     let text =
         sidecar.to_text().map_err(|source| RecordingError::SidecarWriting { path: path.into(), source })?;
-    std::fs::write(&sidecar_part, text).map_err(|error| RecordingError::from_io(&sidecar_part, error))?;
+    std::fs::write(&sidecar_part, text)
+        .map_err(|error| RecordingError::from_io_writing(&sidecar_part, error))?;
     rename(&sidecar_part, &sidecar_path)?;
     rename(&part, path)?;
     Ok(WrittenSummary {
@@ -223,7 +224,7 @@ impl<'a, S: PairSource> Blocks<'a, S> {
 
 /// Everything to the disk; returns the size.
 fn finish(output: BufWriter<File>, part: &Path) -> Result<u64, RecordingError> {
-    let refuse = |error| RecordingError::from_io(part, error);
+    let refuse = |error| RecordingError::from_io_writing(part, error);
     let mut output = output;
     output.flush().map_err(refuse)?;
     output.get_ref().sync_all().map_err(refuse)?;
@@ -231,7 +232,7 @@ fn finish(output: BufWriter<File>, part: &Path) -> Result<u64, RecordingError> {
 }
 
 fn rename(from: &Path, to: &Path) -> Result<(), RecordingError> {
-    std::fs::rename(from, to).map_err(|error| RecordingError::from_io(to, error))
+    std::fs::rename(from, to).map_err(|error| RecordingError::from_io_writing(to, error))
 }
 
 /// The sidecar of what is written.

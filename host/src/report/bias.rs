@@ -23,7 +23,8 @@ const MOST_CANDIDATES: usize = 5;
 const DRIVER: (f64, f64) = (3.6, 40.0);
 
 /// Sets of equal bias resistors met in practice: supply V, ohm, sets, terminators.
-const USUAL: [(f64, f64, u32, &[u32]); 8] = [
+const USUAL: [(f64, f64, u32, &[u32]); 9] = [
+    (5.0, 510.0, 1, &[2, 1, 3, 0]),
     (5.0, 560.0, 1, &[2, 1, 3, 0]),
     (5.0, 680.0, 1, &[2, 1, 3, 0]),
     (5.0, 1_000.0, 1, &[2, 1, 3, 0]),

@@ -32,11 +32,21 @@ fn files_that_are_no_recordings_are_named_for_what_they_are() {
 
 #[test]
 fn denied_and_full_are_told_apart_from_other_failures() {
-    let message =
-        |kind: std::io::ErrorKind| RecordingError::from_io(Path::new("x.csv"), kind.into()).to_string();
-    assert!(message(std::io::ErrorKind::PermissionDenied).contains("permission denied; try"));
-    assert!(message(std::io::ErrorKind::StorageFull).contains("the disk is full; try"));
-    assert!(message(std::io::ErrorKind::TimedOut).contains("try copying the file to a local disk"));
+    use std::io::ErrorKind;
+    let path = Path::new("x.csv");
+    let reading = |kind: ErrorKind| RecordingError::from_io(path, kind.into());
+    assert!(reading(ErrorKind::PermissionDenied).to_string().contains("permission denied; try"));
+    assert!(reading(ErrorKind::TimedOut).to_string().contains("try copying the file to a local disk"));
+    assert!(!reading(ErrorKind::TimedOut).is_about_writing());
+    for (kind, fragment) in [
+        (ErrorKind::NotFound, "there is no such directory; try"),
+        (ErrorKind::PermissionDenied, "permission denied; try another directory"),
+        (ErrorKind::StorageFull, "the disk is full; try"),
+        (ErrorKind::FileTooLarge, "try another disk, or a shorter recording"),
+    ] {
+        let error = RecordingError::from_io_writing(path, kind.into());
+        assert!(error.is_about_writing() && error.to_string().contains(fragment), "{error}");
+    }
 }
 
 #[test]

@@ -183,12 +183,12 @@ fn what_cannot_be_written_is_refused_and_touches_nothing() {
     };
     let plain = WriteOptions::default();
     assert!(refuse(&room.path("x.dat"), &plain).contains("ends in .csv or .wav"));
-    assert!(refuse(&room.path("nowhere/x.csv"), &plain).contains("there is no such file"));
+    assert!(refuse(&room.path("nowhere/x.csv"), &plain).contains("there is no such directory"));
     let old = room.file("old.csv", "keep me");
     assert!(refuse(&old, &plain).contains("it exists already"));
     assert_eq!(std::fs::read(&old).unwrap(), b"keep me");
     std::fs::create_dir(room.path("dir.csv")).unwrap();
-    assert!(refuse(&room.path("dir.csv"), &plain).contains("it is a directory"));
+    assert!(refuse(&room.path("dir.csv"), &plain).contains("it exists already"));
     let long = WriteOptions { pairs: Some(1_100_000_000), ..plain.clone() };
     assert!(refuse(&room.path("long.wav"), &long).contains("ends at 4 GiB, here after 1073741759 pairs"));
     assert!(!room.path("long.wav.part").exists());

@@ -81,6 +81,12 @@ pub(super) fn verdict(report: &Report, style: Style) -> String {
     }
     let clip = report.recording.point.as_deref().unwrap_or("point not named");
     text.push_str(&labelled("clip", clip));
+    if !report.recording.is_complete {
+        text.push_str(&labelled(
+            "incomplete",
+            "the end of the run is not in this log: what came after is not judged",
+        ));
+    }
     text
 }
 

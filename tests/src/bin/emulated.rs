@@ -1,0 +1,228 @@
+//! Checks the emulated board against the desktop, frame by frame.
+//!
+//! `emulated same IMAGE`: plays recordings through the image in the emulator and through the firmware
+//! on this machine; every frame must be identical, envelope included.
+//! `emulated report IMAGE LEGWISE`: `legwise log` records the image through its port, `legwise report`
+//! judges.
+
+use legwise::board::VirtualBoard;
+use legwise::line::{Length, LineSource, scenarios};
+use legwise::port::BoardPort;
+use legwise_firmware::settings;
+use legwise_firmware::source::{PairSource, SourceDescription};
+use legwise_protocol::command::Command;
+use legwise_protocol::decoder::DeviceDecoder;
+use legwise_protocol::framing::{Delivery, DeviceFrame};
+use legwise_protocol::message::Message;
+use legwise_protocol::receivers::{self, TABLE};
+use legwise_tests::emulator::Emulator;
+use legwise_tests::replay::Replay;
+use std::path::{Path, PathBuf};
+use std::process::ExitCode;
+use std::time::{Duration, Instant};
+
+/// Longest silence of the board before it counts as hung.
+const PATIENCE: Duration = Duration::from_secs(60);
+const BOARD_NAME: &str = "emulated M4F";
+
+fn main() -> ExitCode {
+    let arguments: Vec<_> = std::env::args().skip(1).collect();
+    let outcome = match arguments.iter().map(String::as_str).collect::<Vec<_>>()[..] {
+        ["same", image] => same(Path::new(image)),
+        ["report", image, legwise] => report(Path::new(image), Path::new(legwise)),
+        _ => {
+            Err("could not read the arguments; try: emulated same IMAGE | emulated report IMAGE LEGWISE"
+                .into())
+        }
+    };
+    match outcome {
+        Ok(()) => ExitCode::SUCCESS,
+        Err(message) => {
+            eprintln!("{message}");
+            ExitCode::FAILURE
+        }
+    }
+}
+
+type Outcome<T> = Result<T, String>;
+
+/// Every recording through both; all frames must be equal.
+fn same(image: &Path) -> Outcome<()> {
+    let folder = tempfile::tempdir().map_err(text)?;
+    println!(
+        "{:<34} {:>8} {:>7} {:>6} {:>8} {:>7}",
+        "recording", "pairs", "frames", "kept", "spectra", "equal"
+    );
+    let mut has_failed = false;
+    for (name, replay) in recordings() {
+        let path = folder.path().join("replay.bin");
+        replay.write(&path).map_err(text)?;
+        let emulated = from_answer(run_emulated(image, &path)?);
+        let desktop = from_answer(run_desktop(replay.clone()));
+        let is_equal = emulated == desktop;
+        let kept = desktop.iter().filter(|frame| frame.message.is_kept()).count();
+        let spectra = desktop.iter().filter(|frame| matches!(frame.message, Message::Spectrum(_))).count();
+        println!(
+            "{name:<34} {:>8} {:>7} {kept:>6} {spectra:>8} {:>7}",
+            replay.pairs(),
+            desktop.len(),
+            if is_equal { "yes" } else { "NO" }
+        );
+        if !is_equal {
+            has_failed = true;
+            explain(&emulated, &desktop);
+        }
+    }
+    if has_failed { Err("the board and the desktop differ".into()) } else { Ok(()) }
+}
+
+/// The frames from the answer to `Identify` on, sequence numbers counted from there. What came before
+/// depends on when the host's first words arrived.
+fn from_answer(frames: Vec<DeviceFrame>) -> Vec<DeviceFrame> {
+    let is_answer = |frame: &DeviceFrame| matches!(frame.message, Message::Reply(_));
+    let mut frames: Vec<_> = frames.into_iter().skip_while(|frame| !is_answer(frame)).collect();
+    let first = frames.first().map_or(0, |frame| frame.envelope.sequence);
+    for frame in &mut frames {
+        frame.envelope.sequence = frame.envelope.sequence.wrapping_sub(first);
+    }
+    frames
+}
+
+/// The first frame that differs.
+fn explain(emulated: &[DeviceFrame], desktop: &[DeviceFrame]) {
+    println!("  {} frames from the board, {} from the desktop", emulated.len(), desktop.len());
+    if let Some((left, right)) = emulated.iter().zip(desktop).find(|(left, right)| left != right) {
+        println!("  board   {left:?}\n  desktop {right:?}");
+    }
+}
+
+/// Scenarios, a skewed board, clipping, storms, overruns, odd deliveries.
+fn recordings() -> Vec<(String, Replay)> {
+    let mut recordings = Vec::new();
+    for (number, (name, _)) in scenarios::NAMES.iter().enumerate() {
+        let Some(scenario) = scenarios::by_name(name) else { continue };
+        let receiver = receivers::by_name(&scenario.receiver).map_or(0, |receiver| receiver.id as u32);
+        let Ok(source) = LineSource::new(&scenario, 7, Length::Pairs(150_000)) else { continue };
+        recordings
+            .push(((*name).to_owned(), Replay::record(source, receiver, 100 + number as u32, |_| false)));
+    }
+    let quiet = |pairs| {
+        let scenario = scenarios::by_name("drive-bay").ok_or("no such scenario").map_err(str::to_owned);
+        scenario.and_then(|scenario| LineSource::new(&scenario, 3, Length::Pairs(pairs)).map_err(text))
+    };
+    if let Ok(source) = quiet(120_000) {
+        recordings.push(("overruns".into(), Replay::record(source, 0, 200, |number| number % 57 < 3)));
+    }
+    if let Ok(source) = quiet(60_000) {
+        let mut replay = Replay::record(source, 0, 201, |_| false);
+        replay.description.skew_ns = 2_400;
+        recordings.push(("skewed sampling, 2.4 µs".into(), replay));
+    }
+    if let Ok(source) = quiet(60_000) {
+        let mut replay = Replay::record(source, 0, 202, |_| false);
+        storm(&mut replay);
+        recordings.push(("storm with clipping".into(), replay.clone()));
+        replay.receiver = 7;
+        recordings.push(("storm with clipping, LVDS limits".into(), replay));
+    }
+    recordings
+}
+
+/// Common-mode pulses every 37 pairs for a while, some at the converter's rail.
+fn storm(replay: &mut Replay) {
+    let SourceDescription { legs: [scale, _], .. } = replay.description;
+    for delivery in replay.deliveries.iter_mut().skip(40).take(60) {
+        let first = delivery.first_sample;
+        let legs = delivery.leg_a.iter_mut().zip(&mut delivery.leg_b);
+        for (sample, (a, b)) in (first..).zip(legs) {
+            if sample % 37 < 5 {
+                let code = if sample % 5 == 0 { scale.rail_high_code } else { scale.rail_high_code - 700 };
+                (*a, *b) = (code, code - 3);
+            }
+        }
+    }
+}
+
+/// The firmware on this machine, told the same things in the same order.
+fn run_desktop(replay: Replay) -> Vec<DeviceFrame> {
+    let receiver = &TABLE[replay.receiver as usize];
+    let settings = settings::for_receiver(receiver, replay.describe().sample_rate_mhz);
+    let boot_id = replay.boot_id;
+    let mut board = VirtualBoard::new(replay, settings, BOARD_NAME, boot_id);
+    board.command(Command::Identify);
+    let (mut decoder, mut frames, mut bytes) = (DeviceDecoder::new(), Vec::new(), Vec::new());
+    let mut is_running = true;
+    while is_running {
+        bytes.clear();
+        is_running = matches!(board.run_batch(&mut bytes), Ok(true));
+        decoder.feed_frames(&bytes, |frame| frames.push(frame));
+        if let Some(through) = highest_kept(&frames) {
+            board.acknowledge(through);
+        }
+    }
+    frames
+}
+
+/// The image in the emulator, through its serial port.
+fn run_emulated(image: &Path, recording: &Path) -> Outcome<Vec<DeviceFrame>> {
+    let emulator = Emulator::boot(image, recording)?;
+    let mut port = BoardPort::open(&emulator.port, 115_200).map_err(text)?;
+    port.command(Command::Identify).map_err(text)?;
+    let (mut decoder, mut frames, mut buffer) = (DeviceDecoder::new(), Vec::new(), vec![0; 65_536]);
+    let mut acknowledged = 0;
+    let mut heard = Instant::now();
+    loop {
+        let count = port.read(&mut buffer).map_err(text)?;
+        if count > 0 {
+            heard = Instant::now();
+            decoder.feed_frames(&buffer[..count], |frame| frames.push(frame));
+        }
+        let has_ended = matches!(frames.last(), Some(DeviceFrame { message: Message::End(_), .. }));
+        if let Some(through) = highest_kept(&frames).filter(|&through| through > acknowledged && !has_ended) {
+            port.command(Command::Acknowledge { through }).map_err(text)?;
+            acknowledged = through;
+        }
+        if has_ended {
+            return Ok(frames);
+        }
+        if heard.elapsed() > PATIENCE {
+            return Err(format!("the board fell silent after {} frames", frames.len()));
+        }
+    }
+}
+
+fn highest_kept(frames: &[DeviceFrame]) -> Option<u32> {
+    frames.iter().rev().find_map(|frame| match frame.envelope.delivery {
+        Delivery::Kept { number } => Some(number),
+        Delivery::Passing => None,
+    })
+}
+
+/// `legwise log` on the emulated board's port, then `legwise report`.
+fn report(image: &Path, legwise: &Path) -> Outcome<()> {
+    let folder = tempfile::tempdir().map_err(text)?;
+    let scenario = scenarios::by_name("press-ground").ok_or("no such scenario")?;
+    let source = LineSource::new(&scenario, 1, Length::Pairs(20 * 200_000)).map_err(text)?;
+    let recording = folder.path().join("replay.bin");
+    Replay::record(source, 0, 1, |_| false).write(&recording).map_err(text)?;
+    let emulator = Emulator::boot(image, &recording)?;
+    let log: PathBuf = folder.path().join("night.lwlog");
+    let run = |arguments: &[&std::ffi::OsStr]| {
+        let status = std::process::Command::new(legwise).args(arguments).status().map_err(text)?;
+        if status.success() { Ok(()) } else { Err(format!("legwise ended with {status}")) }
+    };
+    run(&[
+        "log".as_ref(),
+        "--port".as_ref(),
+        emulator.port.as_ref(),
+        "--point".as_ref(),
+        "emulated board".as_ref(),
+        "-o".as_ref(),
+        log.as_os_str(),
+    ])?;
+    run(&["report".as_ref(), log.as_os_str()])
+}
+
+fn text(error: impl std::fmt::Display) -> String {
+    error.to_string()
+}
