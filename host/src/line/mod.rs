@@ -4,6 +4,7 @@
 //!
 //! * [`scenario`]: what a scenario file says, read and checked; [`scenarios`]: those built in;
 //! * [`network`]: the wiring as a resistive network; `responses`: what each leg does in every bus state;
+//! * [`pair_theory`]: closed formulas to check a wiring by hand;
 //! * `traffic`: who drives when; `schedule`: when something is on;
 //! * `follower` and `disturbance`: waveforms behind the monitor's RC pole, exact between samples;
 //! * `front_end`: codes, and the scale the board declares; `random`: decisions and noise;
@@ -17,6 +18,7 @@ mod error;
 mod follower;
 mod front_end;
 pub mod network;
+pub mod pair_theory;
 mod random;
 mod responses;
 pub mod scenario;
