@@ -131,6 +131,8 @@ struct Open {
     breach: Breach,
     /// Every limit broken since the excursion began, earlier parts included.
     limits: LimitMask,
+    /// Twice the distance of the part's extreme beyond its limit.
+    worst: i32,
     inside_run: u32,
     has_earlier_part: bool,
     /// Whether every sample outside so far may be a data edge seen through the skew.
@@ -143,6 +145,45 @@ pub struct LimitCheck {
     open: Option<Open>,
     counts: LimitCounts,
     is_confirmed_outside: bool,
+}
+
+/// Samples outside in a row, before they are added to the open excursion: kept small, because a long
+/// excursion must not cost the device more than it has.
+#[derive(Clone, Copy, Debug, Default)]
+struct Stretch {
+    outside: u32,
+    /// Samples outside each limit, in bit order.
+    counts: [u32; Limit::COUNT],
+    worst: i32,
+    worst_limit: Limit,
+    extreme_twice_uv: i32,
+    extreme_sample: u64,
+    area: u64,
+    dm: Span,
+    clipped: u32,
+    last_outside: u64,
+}
+
+impl Stretch {
+    /// Takes a sample whose largest distance is `worst`.
+    #[inline]
+    fn take(&mut self, sample: &Sample, distances: &[i32; Limit::COUNT], worst: i32) {
+        self.outside += 1;
+        for (count, &distance) in self.counts.iter_mut().zip(distances) {
+            *count += u32::from(distance > 0);
+        }
+        if worst > self.worst {
+            let which = distances.iter().zip(Limit::ALL).find(|&(&distance, _)| distance == worst);
+            self.worst = worst;
+            self.worst_limit = which.map_or(Limit::LegAHigh, |(_, limit)| limit);
+            self.extreme_twice_uv = sample.value_twice(self.worst_limit);
+            self.extreme_sample = sample.index;
+        }
+        self.area += u64::from(worst.unsigned_abs());
+        self.dm.include(sample.dm);
+        self.clipped += u32::from(sample.is_clipped);
+        self.last_outside = sample.index;
+    }
 }
 
 /// One sample, as the check sees it.
@@ -178,21 +219,64 @@ impl LimitCheck {
         let codes = block.code_a.iter().zip(block.code_b);
         let mut before = block.dm_before;
         let mut ahead = block.dm.iter().skip(1);
+        let mut stretch = Stretch::default();
         let samples = (block.first_sample..).zip(legs.zip(modes).zip(codes));
         for (index, (((&leg_a, &leg_b), (&twice_cm, &dm)), (&code_a, &code_b))) in samples {
             let after = ahead.next().copied().unwrap_or(block.dm_after);
             let distances = config.distances(leg_a, leg_b, twice_cm);
             let worst = distances.into_iter().fold(i32::MIN, i32::max);
             if worst > 0 {
-                let is_edge = config.edge_step_uv.is_some_and(|step| is_edge(before, dm, after, step));
-                let is_clipped = calibration::is_clipped(&config.legs, code_a, code_b);
-                let sample = Sample { index, leg_a, leg_b, twice_cm, dm, is_edge, is_clipped };
-                self.outside(config, &sample, &distances, events);
+                let is_clipped = block.clipped > 0 && calibration::is_clipped(&config.legs, code_a, code_b);
+                let sample = Sample { index, leg_a, leg_b, twice_cm, dm, is_edge: false, is_clipped };
+                let is_settled =
+                    self.open.as_ref().is_some_and(|open| !open.is_suspect && !open.is_full(config, index));
+                if is_settled {
+                    stretch.take(&sample, &distances, worst);
+                } else {
+                    self.flush(&mut stretch);
+                    let is_edge = config.edge_step_uv.is_some_and(|step| is_edge(before, dm, after, step));
+                    self.outside(config, &Sample { is_edge, ..sample }, &distances, events);
+                }
             } else if self.open.is_some() {
+                self.flush(&mut stretch);
                 self.inside(config, &distances, events);
             }
             before = dm;
         }
+        self.flush(&mut stretch);
+    }
+
+    /// Adds a stretch of samples outside to the open excursion and to the counts.
+    fn flush(&mut self, stretch: &mut Stretch) {
+        let Some(open) = &mut self.open else { return };
+        if stretch.outside == 0 {
+            return;
+        }
+        let Stretch { outside, counts, worst, extreme_twice_uv, extreme_sample, .. } = *stretch;
+        self.counts.outside += u64::from(outside);
+        let mut mask = LimitMask::NONE;
+        let totals = self.counts.outside_by_limit.iter_mut().zip(Limit::ALL);
+        for ((total, limit), &count) in totals.zip(&counts) {
+            *total += u64::from(count);
+            if count > 0 {
+                mask = mask.with(LimitMask::only(limit));
+            }
+        }
+        if worst > open.worst {
+            open.worst = worst;
+            open.breach.worst_limit = stretch.worst_limit;
+            open.breach.extreme_twice_uv = extreme_twice_uv;
+            open.breach.extreme_sample = extreme_sample;
+        }
+        let breach = &mut open.breach;
+        breach.limits = breach.limits.with(mask);
+        breach.outside_samples += u64::from(outside);
+        breach.area_twice_uv_samples = breach.area_twice_uv_samples.saturating_add(stretch.area);
+        breach.dm.merge(stretch.dm);
+        breach.clipped_samples += u64::from(stretch.clipped);
+        open.limits = open.limits.with(mask);
+        open.touch(stretch.last_outside);
+        *stretch = Stretch::default();
     }
 
     /// Closes an open excursion because what follows is not known.
@@ -232,13 +316,13 @@ impl LimitCheck {
         };
         let is_suspicious = sample.is_edge && mask.is_average_only();
         match &mut self.open {
-            None => self.begin(sample, one, is_suspicious, events),
+            None => self.begin(sample, one, worst, is_suspicious, events),
             Some(open)
                 if open.is_full(config, sample.index)
                     && open.remains_suspect(sample.index, is_suspicious) =>
             {
                 self.close(false, events);
-                self.begin(sample, one, is_suspicious, events);
+                self.begin(sample, one, worst, is_suspicious, events);
             }
             Some(open) if open.is_full(config, sample.index) => {
                 let part = if open.has_earlier_part { Part::Middle } else { Part::Begin };
@@ -247,11 +331,13 @@ impl LimitCheck {
                 let limits = open.limits.with(mask);
                 let first_sample = sample.index;
                 let (is_suspect, has_earlier_part) = (false, true);
-                *open = Open { first_sample, breach: one, limits, is_suspect, has_earlier_part, ..*open };
+                *open =
+                    Open { first_sample, breach: one, worst, limits, is_suspect, has_earlier_part, ..*open };
                 open.touch(sample.index);
             }
             Some(open) => {
                 merge_breach(&mut open.breach, &one, config);
+                open.worst = open.worst.max(worst);
                 open.is_suspect = open.remains_suspect(sample.index, is_suspicious);
                 open.limits = open.limits.with(mask);
                 open.touch(sample.index);
@@ -264,6 +350,7 @@ impl LimitCheck {
         &mut self,
         sample: &Sample,
         breach: Breach,
+        worst: i32,
         is_suspect: bool,
         events: &mut dyn FnMut(LimitEvent),
     ) {
@@ -275,6 +362,7 @@ impl LimitCheck {
             last_outside: sample.index,
             breach,
             limits: breach.limits,
+            worst,
             inside_run: 0,
             has_earlier_part: false,
             is_suspect,

@@ -91,6 +91,8 @@ pub struct Monitor<S, L, P, const KEPT: usize, const PASSING: usize> {
     code_a: [i32; BLOCK_PAIRS],
     code_b: [i32; BLOCK_PAIRS],
     has_obeyed: bool,
+    /// Whether the first step has been made.
+    is_introduced: bool,
     is_stopped: bool,
     /// Whether pairs were passed over on request since the last one that was examined.
     has_passed_over: bool,
@@ -100,10 +102,13 @@ pub struct Monitor<S, L, P, const KEPT: usize, const PASSING: usize> {
 impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usize>
     Monitor<S, L, P, KEPT, PASSING>
 {
-    /// A device that starts to examine samples at its first step. It introduces itself at once.
+    /// A device that starts to examine samples at its first step, which begins with an introduction.
+    ///
+    /// Nothing is done to the value after it is made, so that it can be made in place: a copy would cost a
+    /// small board its memory.
     pub fn new(identity: Identity, source: S, link: L, alarm: AlarmPin<P>, settings: Settings) -> Self {
         let description = source.describe();
-        let mut monitor = Self {
+        Self {
             identity,
             description,
             source,
@@ -119,12 +124,11 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
             code_a: [0; BLOCK_PAIRS],
             code_b: [0; BLOCK_PAIRS],
             has_obeyed: false,
+            is_introduced: false,
             is_stopped: false,
             has_passed_over: false,
             is_ended: false,
-        };
-        monitor.introduce();
-        monitor
+        }
     }
 
     /// The outbox, to see what was shed or lost.
@@ -161,6 +165,10 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
     }
 
     fn work(&mut self) -> StepResult<Step, S, L, P> {
+        if !self.is_introduced {
+            self.is_introduced = true;
+            self.introduce();
+        }
         let has_received = self.receive().map_err(StepError::Link)?;
         let has_sampled = self.sample()?;
         let has_sent = self.send().map_err(StepError::Link)?;

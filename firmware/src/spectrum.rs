@@ -156,25 +156,22 @@ impl SpectrumMeter {
     /// Volts, mean removed and windowed: common mode into `re`, differential mode into `im`.
     fn apply_window(&mut self) {
         let (cm_mean, dm_mean) = (mean(&self.twice_cm), mean(&self.dm));
-        let rise_and_fall = WINDOW.iter().chain(WINDOW.iter().rev().skip(1));
-        let pairs = self.twice_cm.iter().zip(&self.dm);
-        for ((out, (&twice_cm, &dm)), &window) in self.work.iter_mut().zip(pairs).zip(rise_and_fall) {
-            out.re = twice_cm.saturating_sub(cm_mean) as f32 * (window * 0.5);
-            out.im = dm.saturating_sub(dm_mean) as f32 * window;
-        }
+        let (twice_cm, dm) = (self.twice_cm.split_at(HALF), self.dm.split_at(HALF));
+        let (rise, fall) = self.work.split_at_mut(HALF);
+        windowed(rise, (twice_cm.0, cm_mean), (dm.0, dm_mean), WINDOW.iter());
+        windowed(fall, (twice_cm.1, cm_mean), (dm.1, dm_mean), WINDOW.iter().rev());
     }
 
     /// Adds |P+Q|² and |P−Q|² of every bin.
     fn accumulate(&mut self) {
-        let spectrum = &self.transformed;
+        let [zero, rest @ ..] = &self.transformed;
+        let [common_zero, common @ ..] = &mut self.common;
+        let [differential_zero, differential @ ..] = &mut self.differential;
         // Bin 0 is its own mirror; bins 1.. mirror N-1 downwards.
-        let mirror = spectrum.iter().take(1).chain(spectrum.iter().rev());
-        let sums = self.common.iter_mut().zip(&mut self.differential);
-        for ((p, q), (common, differential)) in spectrum.iter().zip(mirror).zip(sums) {
-            let (sum_re, sum_im) = (p.re + q.re, p.im - q.im);
-            let (difference_re, difference_im) = (p.re - q.re, p.im + q.im);
-            *common += sum_re * sum_re + sum_im * sum_im;
-            *differential += difference_re * difference_re + difference_im * difference_im;
+        add_powers(*zero, *zero, common_zero, differential_zero);
+        let sums = common.iter_mut().zip(differential);
+        for ((p, q), (common, differential)) in rest.iter().zip(rest.iter().rev()).zip(sums) {
+            add_powers(*p, *q, common, differential);
         }
     }
 
@@ -199,6 +196,29 @@ impl SpectrumMeter {
                 codes,
             }));
         }
+    }
+}
+
+/// |P+Q|² and |P−Q|², where Q is the conjugate of `mirror`.
+#[inline(always)]
+fn add_powers(p: Complex, mirror: Complex, common: &mut f32, differential: &mut f32) {
+    let (sum_re, sum_im) = (p.re + mirror.re, p.im - mirror.im);
+    let (difference_re, difference_im) = (p.re - mirror.re, p.im + mirror.im);
+    *common += sum_re * sum_re + sum_im * sum_im;
+    *differential += difference_re * difference_re + difference_im * difference_im;
+}
+
+/// Half a segment: values less their mean, times the window.
+#[inline(always)]
+fn windowed<'a>(
+    out: &mut [Complex],
+    (twice_cm, cm_mean): (&[i32], i32),
+    (dm, dm_mean): (&[i32], i32),
+    window: impl Iterator<Item = &'a f32>,
+) {
+    for ((out, (&twice_cm, &dm)), &window) in out.iter_mut().zip(twice_cm.iter().zip(dm)).zip(window) {
+        out.re = twice_cm.saturating_sub(cm_mean) as f32 * (window * 0.5);
+        out.im = dm.saturating_sub(dm_mean) as f32 * window;
     }
 }
 

@@ -53,11 +53,12 @@ impl LimitSet {
 }
 
 /// One side of one watched window. The discriminant is the bit number in [`LimitMask`]; never reorder.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, Serialize, Deserialize, MaxSize)]
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Hash, Serialize, Deserialize, MaxSize)]
 #[cfg_attr(feature = "defmt", derive(defmt::Format))]
 #[repr(u8)]
 pub enum Limit {
     /// Leg A above the terminal window.
+    #[default]
     LegAHigh = 0,
     /// Leg A below the terminal window.
     LegALow = 1,
