@@ -3,6 +3,7 @@
 use std::io::{BufRead, BufReader};
 use std::path::Path;
 use std::process::{Child, Command, Stdio};
+use std::sync::mpsc::{Receiver, channel};
 
 /// A running emulator; killed when dropped.
 #[derive(Debug)]
@@ -10,6 +11,7 @@ pub struct Emulator {
     process: Child,
     /// Pseudo-terminal of UART 0.
     pub port: String,
+    lines: Receiver<String>,
 }
 
 impl Emulator {
@@ -31,7 +33,7 @@ impl Emulator {
         // "char device redirected to /dev/pts/N (label serial0)", on either output.
         let stdout = process.stdout.take().map(|out| Box::new(out) as Box<dyn std::io::Read + Send>);
         let stderr = process.stderr.take().map(|out| Box::new(out) as Box<dyn std::io::Read + Send>);
-        let (lines_out, lines) = std::sync::mpsc::channel();
+        let (lines_out, lines) = channel();
         for output in [stdout, stderr].into_iter().flatten() {
             let lines_out = lines_out.clone();
             std::thread::spawn(move || {
@@ -44,9 +46,9 @@ impl Emulator {
         }
         drop(lines_out);
         let mut said = String::new();
-        for line in lines {
+        for line in &lines {
             if let Some(port) = line.split_whitespace().find(|word| word.starts_with("/dev/pts/")) {
-                return Ok(Self { process, port: port.to_owned() });
+                return Ok(Self { process, port: port.to_owned(), lines });
             }
             said.push_str(&line);
         }
@@ -54,9 +56,14 @@ impl Emulator {
         Err(format!("the emulator named no terminal: {said}"))
     }
 
-    /// Waits for the image to end; whether it ended well.
-    pub fn wait(&mut self) -> bool {
-        self.process.wait().is_ok_and(|status| status.success())
+    /// Waits for the image to end; what it wrote to the console, or how it ended otherwise.
+    ///
+    /// # Errors
+    /// When the image ended with a failure.
+    pub fn wait(&mut self) -> Result<Vec<String>, String> {
+        let status = self.process.wait().map_err(|error| error.to_string())?;
+        let lines = self.lines.iter().collect();
+        if status.success() { Ok(lines) } else { Err(format!("the image ended with {status}")) }
     }
 
     /// Whether the image still runs.

@@ -57,13 +57,14 @@ fn same(image: &Path) -> Outcome<()> {
     for (name, replay) in recordings() {
         let path = folder.path().join("replay.bin");
         replay.write(&path).map_err(text)?;
-        let emulated = from_answer(run_emulated(image, &path)?);
+        let (emulated, console) = run_emulated(image, &path)?;
+        let emulated = from_answer(emulated);
         let desktop = from_answer(run_desktop(replay.clone()));
         let is_equal = emulated == desktop;
         let kept = desktop.iter().filter(|frame| frame.message.is_kept()).count();
         let spectra = desktop.iter().filter(|frame| matches!(frame.message, Message::Spectrum(_))).count();
         println!(
-            "{name:<34} {:>8} {:>7} {kept:>6} {spectra:>8} {:>7}",
+            "{name:<34} {:>8} {:>7} {kept:>6} {spectra:>8} {:>7}  {console}",
             replay.pairs(),
             desktop.len(),
             if is_equal { "yes" } else { "NO" }
@@ -164,8 +165,8 @@ fn run_desktop(replay: Replay) -> Vec<DeviceFrame> {
 }
 
 /// The image in the emulator, through its serial port.
-fn run_emulated(image: &Path, recording: &Path) -> Outcome<Vec<DeviceFrame>> {
-    let emulator = Emulator::boot(image, recording)?;
+fn run_emulated(image: &Path, recording: &Path) -> Outcome<(Vec<DeviceFrame>, String)> {
+    let mut emulator = Emulator::boot(image, recording)?;
     let mut port = BoardPort::open(&emulator.port, 115_200).map_err(text)?;
     port.command(Command::Identify).map_err(text)?;
     let (mut decoder, mut frames, mut buffer) = (DeviceDecoder::new(), Vec::new(), vec![0; 65_536]);
@@ -178,12 +179,12 @@ fn run_emulated(image: &Path, recording: &Path) -> Outcome<Vec<DeviceFrame>> {
             decoder.feed_frames(&buffer[..count], |frame| frames.push(frame));
         }
         let has_ended = matches!(frames.last(), Some(DeviceFrame { message: Message::End(_), .. }));
-        if let Some(through) = highest_kept(&frames).filter(|&through| through > acknowledged && !has_ended) {
+        if let Some(through) = highest_kept(&frames).filter(|&through| through > acknowledged) {
             port.command(Command::Acknowledge { through }).map_err(text)?;
             acknowledged = through;
         }
-        if has_ended {
-            return Ok(frames);
+        if has_ended && highest_kept(&frames) == Some(acknowledged) {
+            return Ok((frames, emulator.wait()?.join(" ")));
         }
         if heard.elapsed() > PATIENCE {
             return Err(format!("the board fell silent after {} frames", frames.len()));

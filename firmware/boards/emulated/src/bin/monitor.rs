@@ -1,0 +1,80 @@
+//! The whole monitor: replay, pipeline, UART. Sampling starts with the host's first word.
+#![no_std]
+#![no_main]
+
+use core::cell::Cell;
+use cortex_m_rt::entry;
+use cortex_m_semihosting::{debug, nr, syscall1};
+use legwise_board_emulated::replay::Replay;
+use legwise_board_emulated::stack::high_water;
+use legwise_board_emulated::uart::Uart;
+use legwise_firmware::alarm::{AlarmPin, NoPin};
+use legwise_firmware::monitor::{Identity, Monitor, Step};
+use legwise_firmware::settings;
+use legwise_protocol::message::ResetCause;
+use legwise_protocol::receivers::TABLE;
+
+const KEPT_BYTES: usize = 6 * 1024;
+const PASSING_BYTES: usize = 5 * 1024;
+/// Kept messages one block can make, at most, with room to spare: below this the replay waits.
+const KEPT_ROOM_BYTES: usize = 3 * 1024;
+
+#[entry]
+fn main() -> ! {
+    let may_take = Cell::new(false);
+    let Ok(replay) = Replay::open(&may_take) else { end(debug::EXIT_FAILURE) };
+    let header = replay.header();
+    let Some(receiver) = TABLE.get(header.receiver as usize) else { end(debug::EXIT_FAILURE) };
+    let identity = Identity {
+        boot_id: header.boot_id,
+        board: "emulated M4F",
+        serial: 0,
+        reset_cause: ResetCause::Software,
+    };
+    let Ok(alarm) = AlarmPin::new(NoPin, 0);
+    let rate = legwise_firmware::source::PairSource::describe(&replay).sample_rate_mhz;
+    let settings = settings::for_receiver(receiver, rate);
+    let mut monitor =
+        Monitor::<_, _, _, KEPT_BYTES, PASSING_BYTES>::new(identity, replay, Uart::new(), alarm, settings);
+    loop {
+        // A recording can wait for the link; a converter could not. Nothing is shed here.
+        let has_room = monitor.outbox().kept_room() >= KEPT_ROOM_BYTES && monitor.outbox().is_sent();
+        may_take.set(has_room && monitor.has_obeyed());
+        match monitor.step() {
+            Ok(Step::Worked | Step::Waiting) => {}
+            Ok(Step::Finished) if monitor.outbox().is_empty() => {
+                tell_stack();
+                end(debug::EXIT_SUCCESS)
+            }
+            Ok(Step::Finished) => {}
+            Err(_) => end(debug::EXIT_FAILURE),
+        }
+    }
+}
+
+/// Writes the stack's high-water mark to the emulator's console, in decimal and without `core::fmt`.
+fn tell_stack() {
+    let (used, available) = high_water();
+    let mut line = *b"stack      0 of      0 bytes\n\0";
+    write_number(&mut line, 12, used);
+    write_number(&mut line, 22, available);
+    // SAFETY: SYS_WRITE0 reads the zero-ended line, which outlives the call.
+    unsafe { syscall1(nr::WRITE0, line.as_ptr() as usize) };
+}
+
+/// Writes digits so that the last one stands before `end`.
+fn write_number(line: &mut [u8], end: usize, mut number: usize) {
+    for slot in line.iter_mut().take(end).rev().take(6) {
+        *slot = b'0' + (number % 10) as u8;
+        number /= 10;
+        if number == 0 {
+            return;
+        }
+    }
+}
+
+fn end(code: debug::ExitStatus) -> ! {
+    loop {
+        debug::exit(code);
+    }
+}
