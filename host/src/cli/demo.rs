@@ -61,7 +61,9 @@ pub(super) fn run(arguments: &DemoArguments) -> anyhow::Result<Exit> {
         .with_context(|| format!("could not write {}; try another --folder", report_path.display()))?;
     terminal::print(&format!("\n{}", report::text::render(&report, terminal::style())))?;
     terminal::print(&format!(
-        "bus time ran {:.0} times faster than real time ({} in {})\nlog    {}\nreport {}",
+        "{}: {}\nbus time ran {:.0} times faster than real time ({} in {})\nlog    {}\nreport {}",
+        report::text::verdict_words(report.verdict),
+        report.reason,
         pairs as f64 / rate_hz / took,
         figures::span(pairs as f64 / rate_hz),
         figures::span(took),

@@ -26,13 +26,14 @@ const LAST_WORDS: Duration = Duration::from_secs(2);
 pub(super) fn run(arguments: &LogArguments) -> anyhow::Result<Exit> {
     let watching = arguments.watching.choose(None)?;
     let path = arguments.output.clone().unwrap_or_else(default_path);
-    let port = BoardPort::open(&arguments.port, arguments.baud)?;
-    let about = stream::about(Origin::Serial, &arguments.port, arguments.point.as_deref());
-    let log = Log::create(&path, &about)?;
+    // Before anything is opened: from here on Ctrl-C ends cleanly.
     let stop = Arc::new(AtomicBool::new(false));
     let flag = Arc::clone(&stop);
     ctrlc::set_handler(move || flag.store(true, Ordering::SeqCst))
         .context("could not catch Ctrl-C; try again")?;
+    let port = BoardPort::open(&arguments.port, arguments.baud)?;
+    let about = stream::about(Origin::Serial, &arguments.port, arguments.point.as_deref());
+    let log = Log::create(&path, &about)?;
 
     terminal::print(&format!("logging {} into {}; Ctrl-C ends it", arguments.port, path.display()))?;
     if arguments.point.is_none() {
