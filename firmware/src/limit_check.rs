@@ -24,12 +24,15 @@
 //! Hysteresis and hold-off only decide when an excursion *closes*: they add no sample to it and none
 //! to the counts. A block whose extremes touch no limit needs no look at its samples.
 
+mod open;
+
 use crate::block::{Block, Spans};
 use crate::calibration;
 use crate::extremes::is_edge;
 use legwise_protocol::limits::{Limit, LimitMask, LimitSet};
 use legwise_protocol::message::{Breach, Detection, Excursion, LegScale, Part};
 use legwise_protocol::units::Span;
+use open::{Open, Sample, Stretch};
 
 /// What the check needs to know.
 #[derive(Clone, Copy, Debug)]
@@ -122,80 +125,12 @@ pub enum LimitEvent {
     Closed(Excursion),
 }
 
-/// An open excursion (of its current part).
-#[derive(Clone, Copy, Debug)]
-struct Open {
-    number: u64,
-    first_sample: u64,
-    last_outside: u64,
-    breach: Breach,
-    /// Every limit broken since the excursion began, earlier parts included.
-    limits: LimitMask,
-    /// Twice the distance of the part's extreme beyond its limit.
-    worst: i32,
-    inside_run: u32,
-    has_earlier_part: bool,
-    /// Whether every sample outside so far may be a data edge seen through the skew.
-    is_suspect: bool,
-}
-
 /// The running check.
 #[derive(Clone, Copy, Debug, Default)]
 pub struct LimitCheck {
     open: Option<Open>,
     counts: LimitCounts,
     is_confirmed_outside: bool,
-}
-
-/// Samples outside in a row, before they are added to the open excursion: kept small, because a long
-/// excursion must not cost the device more than it has.
-#[derive(Clone, Copy, Debug, Default)]
-struct Stretch {
-    outside: u32,
-    /// Samples outside each limit, in bit order.
-    counts: [u32; Limit::COUNT],
-    worst: i32,
-    worst_limit: Limit,
-    extreme_twice_uv: i32,
-    extreme_sample: u64,
-    area: u64,
-    dm: Span,
-    clipped: u32,
-    last_outside: u64,
-}
-
-impl Stretch {
-    /// Takes a sample whose largest distance is `worst`.
-    #[inline]
-    fn take(&mut self, sample: &Sample, distances: &[i32; Limit::COUNT], worst: i32) {
-        self.outside += 1;
-        for (count, &distance) in self.counts.iter_mut().zip(distances) {
-            *count += u32::from(distance > 0);
-        }
-        if worst > self.worst {
-            let which = distances.iter().zip(Limit::ALL).find(|&(&distance, _)| distance == worst);
-            self.worst = worst;
-            self.worst_limit = which.map_or(Limit::LegAHigh, |(_, limit)| limit);
-            self.extreme_twice_uv = sample.value_twice(self.worst_limit);
-            self.extreme_sample = sample.index;
-        }
-        self.area += u64::from(worst.unsigned_abs());
-        self.dm.include(sample.dm);
-        self.clipped += u32::from(sample.is_clipped);
-        self.last_outside = sample.index;
-    }
-}
-
-/// One sample, as the check sees it.
-#[derive(Clone, Copy)]
-struct Sample {
-    index: u64,
-    leg_a: i32,
-    leg_b: i32,
-    twice_cm: i32,
-    dm: i32,
-    is_edge: bool,
-    is_clipped: bool,
 }
 
 impl LimitCheck {
@@ -398,48 +333,6 @@ impl LimitCheck {
         }
         let part = if open.has_earlier_part { Part::Finish } else { Part::Whole };
         events(LimitEvent::Closed(open.record(part, is_suspect, is_cut)));
-    }
-}
-
-impl Sample {
-    /// Twice the voltage a limit is judged on.
-    fn value_twice(&self, limit: Limit) -> i32 {
-        match limit {
-            Limit::LegAHigh | Limit::LegALow => self.leg_a.saturating_mul(2),
-            Limit::LegBHigh | Limit::LegBLow => self.leg_b.saturating_mul(2),
-            Limit::AverageHigh | Limit::AverageLow => self.twice_cm,
-        }
-    }
-}
-
-impl Open {
-    fn touch(&mut self, index: u64) {
-        self.last_outside = index;
-        self.inside_run = 0;
-    }
-
-    /// Whether the part is as long as one may be.
-    const fn is_full(&self, config: &LimitConfig, index: u64) -> bool {
-        index - self.first_sample >= config.longest_samples as u64
-    }
-
-    /// Whether it is still a suspect with one more sample outside: a peak that stands alone.
-    const fn remains_suspect(&self, index: u64, is_suspicious: bool) -> bool {
-        self.is_suspect && is_suspicious && index > self.last_outside + 1
-    }
-
-    fn record(&self, part: Part, is_edge_suspect: bool, is_cut: bool) -> Excursion {
-        // A part is at most longest_samples (a u32) long, plus nothing: the next one begins beyond it.
-        let samples = u32::try_from(self.last_outside - self.first_sample + 1).unwrap_or(u32::MAX);
-        Excursion {
-            number: self.number,
-            first_sample: self.first_sample,
-            samples,
-            breach: self.breach,
-            part,
-            is_edge_suspect,
-            is_cut,
-        }
     }
 }
 
