@@ -191,6 +191,7 @@ mod tests {
     use super::*;
     use core::convert::Infallible;
     use proptest::prelude::*;
+    use proptest::test_runner::RngSeed;
     use std::vec::Vec;
 
     /// A port that takes packets only when the host reads.
@@ -313,6 +314,7 @@ mod tests {
     }
 
     proptest! {
+        #![proptest_config(ProptestConfig { failure_persistence: None, rng_seed: RngSeed::Fixed(1), ..ProptestConfig::default() })]
         /// Whatever the host's pace: bytes arrive once, in order, and a transfer is always closed
         /// by a short packet when the host has caught up.
         #[test]

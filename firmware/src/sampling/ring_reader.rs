@@ -90,6 +90,7 @@ impl RingReader {
 mod tests {
     use super::*;
     use proptest::prelude::*;
+    use proptest::test_runner::RngSeed;
     use std::vec;
     use std::vec::Vec;
 
@@ -121,6 +122,7 @@ mod tests {
     }
 
     proptest! {
+        #![proptest_config(ProptestConfig { failure_persistence: None, rng_seed: RngSeed::Fixed(1), ..ProptestConfig::default() })]
         /// A writer that writes its own position into the ring, and a reader of any pace: every scan
         /// is delivered in order or counted as lost, and no delivered word was overwritten.
         #[test]

@@ -90,6 +90,9 @@ const fn high_half(word: u32) -> u16 {
 pub const BAD_CONVERSION: u16 = 1 << 15;
 
 /// One converter that reads leg A, leg B and a marker in turn: three words per scan.
+///
+/// One slip shows at its first scan. Several that nobody reports and that add up to a whole scan leave
+/// the marker in its place: they cannot be seen, and the scan in which they meet may hold a wrong pair.
 #[derive(Clone, Copy, Debug)]
 pub struct AlternatingLayout {
     /// What the marker reads.
