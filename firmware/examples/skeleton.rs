@@ -9,7 +9,8 @@ use legwise_firmware::alarm::{AlarmPin, NoPin};
 use legwise_firmware::converters::hand_over::HandOver;
 use legwise_firmware::front_end::{Divider, FrontEnd};
 use legwise_firmware::link::Link;
-use legwise_firmware::monitor::{Identity, Monitor, Step};
+use legwise_firmware::monitor::{Identity, Memory, Monitor, Step};
+use legwise_firmware::pipeline::Buffers;
 use legwise_firmware::settings;
 use legwise_firmware::source::SourceDescription;
 use legwise_protocol::decoder::DeviceDecoder;
@@ -113,13 +114,10 @@ fn run() -> Vec<u8> {
     let Some(receiver) = by_id(ReceiverId::Tia485A) else { return Vec::new() };
     let settings = settings::for_receiver(receiver, DESCRIPTION.sample_rate_mhz);
     let Ok(alarm) = AlarmPin::new(NoPin, DESCRIPTION.sample_rate_mhz / 1000);
-    let mut monitor = Monitor::<_, _, _, KEPT_BYTES, PASSING_BYTES>::new(
-        identity,
-        source,
-        Uart::default(),
-        alarm,
-        settings,
-    );
+    // On a board two statics as well: the monitor's memory, about 45 kB, must not pass over the stack.
+    let (mut buffers, mut memory) = (Buffers::new(), Memory::<KEPT_BYTES, PASSING_BYTES>::new());
+    let hardware = (source, Uart::default(), alarm);
+    let mut monitor = Monitor::new(identity, settings, hardware, (&mut buffers, &mut memory));
 
     for _ in 0..400 {
         // On a board this is the timer interrupt, which comes between any two lines of the loop.

@@ -25,6 +25,9 @@ pub struct Aligner {
 }
 
 impl Aligner {
+    /// No skew.
+    pub(crate) const UNSET: Self = Self { taps: [0; TAPS], first_tap: 0, is_skewed: false };
+
     /// For leg B sampled `skew_ns` after leg A (negative: before), at the given rate. A skew of a
     /// whole sample or more is bounded to just below one: the source must renumber its samples instead.
     pub fn new(skew_ns: i32, sample_rate_mhz: u64) -> Self {

@@ -31,6 +31,20 @@ struct Short {
 }
 
 impl Calibration {
+    /// No scale yet: every code becomes 0 µV.
+    pub(crate) const UNSET: Self = Self {
+        scale: LegScale {
+            mantissa: 0,
+            shift: 0,
+            offset_uv: 0,
+            rail_low_code: 0,
+            rail_high_code: 0,
+            gain_uncertainty_ppm: 0,
+            offset_uncertainty_uv: 0,
+        },
+        short: None,
+    };
+
     /// Makes a scale ready. A shift out of range is bounded.
     pub fn new(scale: LegScale) -> Self {
         let scale = LegScale { shift: scale.shift.clamp(1, 40), ..scale };

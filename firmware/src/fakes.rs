@@ -4,7 +4,7 @@ use crate::link::Link;
 use crate::source::{PairSource, SourceDescription, Taken};
 use core::convert::Infallible;
 use heapless::Deque;
-use legwise_protocol::message::LegScale;
+use legwise_protocol::message::{GapCause, LegScale};
 
 /// A scale of exactly one microvolt per code, with rails out of reach.
 pub const MICROVOLT_CODES: LegScale = LegScale {
@@ -62,7 +62,7 @@ impl PairSource for ScriptedSource<'_> {
     }
 
     fn take(&mut self, leg_a: &mut [i32], leg_b: &mut [i32]) -> Result<Taken, Infallible> {
-        let mut is_overrun = false;
+        let mut gap = None;
         loop {
             let length = self.delivery_length(leg_a.len().min(leg_b.len()));
             let rest_a = self.leg_a.get(self.next_sample..).unwrap_or(&[]);
@@ -74,7 +74,7 @@ impl PairSource for ScriptedSource<'_> {
             let first_sample = self.next_sample as u64;
             self.next_sample += pairs;
             if self.overruns.contains(&(self.next_delivery - 1)) {
-                is_overrun = true;
+                gap = Some(GapCause::Overrun);
                 continue;
             }
             for (out, from) in [(leg_a, rest_a), (leg_b, rest_b)] {
@@ -82,7 +82,7 @@ impl PairSource for ScriptedSource<'_> {
                     *slot = code;
                 }
             }
-            return Ok(Taken::Pairs { first_sample, pairs, is_overrun });
+            return Ok(Taken::Pairs { first_sample, pairs, gap });
         }
     }
 }

@@ -67,6 +67,13 @@ pub struct LevelMeter {
 
 impl Default for LevelMeter {
     fn default() -> Self {
+        Self::new()
+    }
+}
+
+impl LevelMeter {
+    /// An empty histogram.
+    pub const fn new() -> Self {
         Self {
             first_sample: 0,
             samples: 0,
@@ -76,9 +83,17 @@ impl Default for LevelMeter {
             twice_cm_sums: [0; 3],
         }
     }
-}
 
-impl LevelMeter {
+    /// Forgets everything.
+    pub fn restart(&mut self) {
+        self.first_sample = 0;
+        self.samples = 0;
+        self.bins.fill(Bin { count: 0, offset: 0 });
+        self.state = IDLE;
+        self.settled = [0; 3];
+        self.twice_cm_sums = [0; 3];
+    }
+
     /// Samples in the interval so far.
     pub const fn samples(&self) -> u32 {
         self.samples
@@ -131,7 +146,9 @@ impl LevelMeter {
     /// The levels of the interval, and a fresh start.
     pub fn finish(&mut self, idle_below_uv: u32) -> Levels {
         let levels = self.evaluate(idle_below_uv);
-        *self = Self { state: self.state, ..Self::default() };
+        let state = self.state;
+        self.restart();
+        self.state = state;
         levels
     }
 

@@ -6,10 +6,11 @@ use crate::alarm::AlarmPin;
 use crate::block::BLOCK_PAIRS;
 use crate::link::Link;
 use crate::outbox::Outbox;
-use crate::pipeline::Pipeline;
+use crate::pipeline::{Buffers, Pipeline};
 use crate::settings;
 use crate::source::{PairSource, SourceDescription, Taken};
 use crate::trace;
+use core::ops::DerefMut;
 use embedded_hal::digital::{ErrorType, OutputPin};
 use legwise_protocol::WIRE_VERSION;
 use legwise_protocol::bytes::Bytes;
@@ -74,22 +75,48 @@ impl<S: core::fmt::Debug, L: core::fmt::Debug, P: core::fmt::Debug> core::fmt::D
 pub type StepResult<T, S, L, P> =
     Result<T, StepError<<S as PairSource>::Error, <L as Link>::Error, <P as ErrorType>::Error>>;
 
-/// The device. `KEPT` and `PASSING` are the sizes of the outbox in bytes.
+/// What a monitor holds besides the buffers of its pipeline. `KEPT` and `PASSING` are the sizes of the
+/// outbox in bytes. All bytes of a new one are 0, so that a static one takes no flash.
 #[derive(Debug)]
-pub struct Monitor<S, L, P, const KEPT: usize, const PASSING: usize> {
+pub struct Memory<const KEPT: usize, const PASSING: usize> {
+    outbox: Outbox<KEPT, PASSING>,
+    frame: [u8; DEVICE_FRAME_BYTES],
+    code_a: [i32; BLOCK_PAIRS],
+    code_b: [i32; BLOCK_PAIRS],
+}
+
+impl<const KEPT: usize, const PASSING: usize> Memory<KEPT, PASSING> {
+    /// Nothing held.
+    pub const fn new() -> Self {
+        Self {
+            outbox: Outbox::new(),
+            frame: [0; DEVICE_FRAME_BYTES],
+            code_a: [0; BLOCK_PAIRS],
+            code_b: [0; BLOCK_PAIRS],
+        }
+    }
+}
+
+impl<const KEPT: usize, const PASSING: usize> Default for Memory<KEPT, PASSING> {
+    fn default() -> Self {
+        Self::new()
+    }
+}
+
+/// The device. Its large parts live where the board wants them: `B` refers to [`Buffers`] and `M` to a
+/// [`Memory`], by a `&'static mut` on a board, by a `Box` on a desktop.
+#[derive(Debug)]
+pub struct Monitor<S, L, P, B, M> {
     identity: Identity,
     description: SourceDescription,
     source: S,
     link: L,
     alarm: AlarmPin<P>,
-    pipeline: Pipeline,
-    outbox: Outbox<KEPT, PASSING>,
+    pipeline: Pipeline<B>,
+    memory: M,
     requests: RequestDecoder,
-    frame: [u8; DEVICE_FRAME_BYTES],
     frame_length: usize,
     frame_sent: usize,
-    code_a: [i32; BLOCK_PAIRS],
-    code_b: [i32; BLOCK_PAIRS],
     has_obeyed: bool,
     /// Whether the first step has been made.
     is_introduced: bool,
@@ -99,30 +126,37 @@ pub struct Monitor<S, L, P, const KEPT: usize, const PASSING: usize> {
     is_ended: bool,
 }
 
-impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usize>
-    Monitor<S, L, P, KEPT, PASSING>
+impl<S, L, P, B, M, const KEPT: usize, const PASSING: usize> Monitor<S, L, P, B, M>
+where
+    S: PairSource,
+    L: Link,
+    P: OutputPin,
+    B: DerefMut<Target = Buffers>,
+    M: DerefMut<Target = Memory<KEPT, PASSING>>,
 {
     /// A device that starts to examine samples at its first step, which begins with an introduction.
-    ///
-    /// Nothing is done to the value after it is made, so that it can be made in place: a copy would cost a
-    /// small board its memory.
-    pub fn new(identity: Identity, source: S, link: L, alarm: AlarmPin<P>, settings: Settings) -> Self {
+    /// What `buffers` and `memory` held before is forgotten.
+    pub fn new(
+        identity: Identity,
+        settings: Settings,
+        (source, link, alarm): (S, L, AlarmPin<P>),
+        (buffers, mut memory): (B, M),
+    ) -> Self {
         let description = source.describe();
+        memory.outbox.begin(identity.boot_id);
+        // One delimiter first: whatever the line carried before ends there.
+        memory.frame.fill(DELIMITER);
         Self {
             identity,
             description,
             source,
             link,
             alarm,
-            pipeline: Pipeline::new(description, settings),
-            outbox: Outbox::new(identity.boot_id),
+            pipeline: Pipeline::new(buffers, description, settings),
+            memory,
             requests: RequestDecoder::new(),
-            // One delimiter first: whatever the line carried before ends there.
-            frame: [DELIMITER; DEVICE_FRAME_BYTES],
             frame_length: 1,
             frame_sent: 0,
-            code_a: [0; BLOCK_PAIRS],
-            code_b: [0; BLOCK_PAIRS],
             has_obeyed: false,
             is_introduced: false,
             is_stopped: false,
@@ -132,8 +166,8 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
     }
 
     /// The outbox, to see what was shed or lost.
-    pub const fn outbox(&self) -> &Outbox<KEPT, PASSING> {
-        &self.outbox
+    pub fn outbox(&self) -> &Outbox<KEPT, PASSING> {
+        &self.memory.outbox
     }
 
     /// Whether the host has ever asked for anything.
@@ -147,7 +181,7 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
     }
 
     /// Index of the pair expected next.
-    pub const fn next_sample(&self) -> u64 {
+    pub fn next_sample(&self) -> u64 {
         self.pipeline.next_sample()
     }
 
@@ -174,7 +208,7 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
         let has_sent = self.send().map_err(StepError::Link)?;
         Ok(if has_received || has_sampled || has_sent {
             Step::Worked
-        } else if self.is_ended && self.outbox.is_sent() && self.frame_sent == self.frame_length {
+        } else if self.is_ended && self.memory.outbox.is_sent() && self.frame_sent == self.frame_length {
             Step::Finished
         } else {
             Step::Waiting
@@ -186,8 +220,9 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
         if self.is_ended {
             return Ok(false);
         }
-        let taken = self.source.take(&mut self.code_a, &mut self.code_b).map_err(StepError::Source)?;
-        let Self { pipeline, outbox, .. } = self;
+        let Self { pipeline, memory, .. } = self;
+        let Memory { outbox, code_a, code_b, .. } = &mut **memory;
+        let taken = self.source.take(code_a, code_b).map_err(StepError::Source)?;
         let records = &mut |message: &Message, sample: u64| outbox.record(message, sample);
         match taken {
             Taken::Nothing => return Ok(false),
@@ -198,15 +233,13 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
                 self.alarm.follow(is_outside, end).map_err(StepError::Pin)?;
                 return Ok(true);
             }
-            Taken::Pairs { first_sample, pairs, is_overrun } => {
-                let cause = match (core::mem::take(&mut self.has_passed_over), is_overrun) {
-                    (true, _) => GapCause::Stopped,
-                    (false, true) => GapCause::Overrun,
-                    (false, false) => GapCause::Skipped,
-                };
-                let code_a = self.code_a.get(..pairs).unwrap_or(&self.code_a);
-                let code_b = self.code_b.get(..pairs).unwrap_or(&self.code_b);
-                if is_overrun && first_sample == pipeline.next_sample() {
+            Taken::Pairs { first_sample, pairs, gap } => {
+                let has_passed_over = core::mem::take(&mut self.has_passed_over);
+                let cause =
+                    if has_passed_over { GapCause::Stopped } else { gap.unwrap_or(GapCause::Skipped) };
+                let code_a = code_a.get(..pairs).unwrap_or(code_a);
+                let code_b = code_b.get(..pairs).unwrap_or(code_b);
+                if gap.is_some() && first_sample == pipeline.next_sample() {
                     pipeline.gap(first_sample, 0, cause, records);
                 }
                 pipeline.take(first_sample, code_a, code_b, cause, records);
@@ -226,11 +259,12 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
     fn send(&mut self) -> Result<bool, L::Error> {
         let mut has_sent = false;
         loop {
+            let Memory { outbox, frame, .. } = &mut *self.memory;
             if self.frame_sent == self.frame_length {
                 self.frame_sent = 0;
-                self.frame_length = self.outbox.next_frame(&mut self.frame);
+                self.frame_length = outbox.next_frame(frame);
             }
-            let waiting = self.frame.get(self.frame_sent..self.frame_length).unwrap_or(&[]);
+            let waiting = frame.get(self.frame_sent..self.frame_length).unwrap_or(&[]);
             if waiting.is_empty() {
                 return Ok(has_sent);
             }
@@ -262,10 +296,10 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
             None => Outcome::Unsupported,
             Some(Command::Acknowledge { through }) => {
                 trace::acknowledged(through);
-                return self.outbox.acknowledge(through);
+                return self.memory.outbox.acknowledge(through);
             }
             Some(Command::Identify) => {
-                self.outbox.send_again();
+                self.memory.outbox.send_again();
                 self.introduce();
                 Outcome::Done
             }
@@ -287,14 +321,15 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
         };
         trace::command(sequence, command.as_ref(), outcome);
         let sample = self.pipeline.next_sample();
-        self.outbox.record(&Message::Reply(Reply { to: sequence, outcome }), sample);
+        self.memory.outbox.record(&Message::Reply(Reply { to: sequence, outcome }), sample);
     }
 
     fn change(&mut self, settings: Settings) -> Outcome {
         if !settings::is_valid(&settings) {
             return Outcome::OutOfRange;
         }
-        let Self { pipeline, outbox, .. } = self;
+        let Self { pipeline, memory, .. } = self;
+        let outbox = &mut memory.outbox;
         pipeline.change(settings, &mut |message, sample| outbox.record(message, sample));
         Outcome::Done
     }
@@ -310,7 +345,8 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
     fn stop(&mut self) -> Outcome {
         if !self.is_stopped && !self.is_ended {
             self.is_stopped = true;
-            let Self { pipeline, outbox, .. } = self;
+            let Self { pipeline, memory, .. } = self;
+            let outbox = &mut memory.outbox;
             pipeline.end(EndCause::Stopped, &mut |message, sample| outbox.record(message, sample));
         }
         Outcome::Done
@@ -328,8 +364,8 @@ impl<S: PairSource, L: Link, P: OutputPin, const KEPT: usize, const PASSING: usi
             legs: self.description.legs,
         };
         let sample = self.pipeline.next_sample();
-        self.outbox.record(&Message::Hello(hello), sample);
-        self.outbox.record(&Message::Settings(*self.pipeline.settings()), sample);
+        self.memory.outbox.record(&Message::Hello(hello), sample);
+        self.memory.outbox.record(&Message::Settings(*self.pipeline.settings()), sample);
     }
 }
 

@@ -49,6 +49,10 @@ impl<const N: usize> ByteQueue<N> {
         Self { ring: [0; N], start: 0, used: 0 }
     }
 
+    const fn clear(&mut self) {
+        (self.start, self.used) = (0, 0);
+    }
+
     const fn is_open_for(&self, length: usize) -> bool {
         N - self.used >= length + HEADER
     }
@@ -128,8 +132,8 @@ pub struct Outbox<const KEPT: usize, const PASSING: usize> {
     order: u32,
     kept: ByteQueue<KEPT>,
     passing: ByteQueue<PASSING>,
-    /// Number of the oldest kept message still held.
-    first_kept_number: u32,
+    /// Number of the newest kept message that is no longer held.
+    kept_acknowledged: u32,
     /// Kept messages at the front that have been sent, and the bytes they take in the queue.
     kept_sent: u32,
     kept_sent_bytes: usize,
@@ -142,20 +146,26 @@ pub struct Outbox<const KEPT: usize, const PASSING: usize> {
     shed: u32,
 }
 
+impl<const KEPT: usize, const PASSING: usize> Default for Outbox<KEPT, PASSING> {
+    fn default() -> Self {
+        Self::new()
+    }
+}
+
 impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
     /// Room that snippets leave for other kept messages.
     const RESERVE: usize = KEPT / 4;
 
-    /// An empty outbox for one boot.
-    pub const fn new(boot_id: u32) -> Self {
+    /// An empty outbox.
+    pub const fn new() -> Self {
         const { assert!(KEPT >= 2 * MESSAGE_BYTES && PASSING >= 2 * MESSAGE_BYTES) };
         Self {
-            boot_id,
+            boot_id: 0,
             sequence: 0,
             order: 0,
             kept: ByteQueue::new(),
             passing: ByteQueue::new(),
-            first_kept_number: 1,
+            kept_acknowledged: 0,
             kept_sent: 0,
             kept_sent_bytes: 0,
             kept_sent_ever: 0,
@@ -164,6 +174,17 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
             told_loss: Loss { snippet_parts: 0, records: 0 },
             shed: 0,
         }
+    }
+
+    /// Starts afresh, empty, for one boot.
+    pub fn begin(&mut self, boot_id: u32) {
+        self.kept.clear();
+        self.passing.clear();
+        self.boot_id = boot_id;
+        (self.sequence, self.order, self.newest_sample) = (0, 0, 0);
+        (self.kept_acknowledged, self.kept_sent, self.kept_sent_ever) = (0, 0, 0);
+        self.kept_sent_bytes = 0;
+        (self.loss, self.told_loss, self.shed) = (Loss::default(), Loss::default(), 0);
     }
 
     /// Passing messages shed so far.
@@ -209,14 +230,14 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
     /// Forgets kept messages up to and including number `through`.
     pub fn acknowledge(&mut self, through: u32) {
         // Numbers that were never sent cannot have been stored: ignore them.
-        let count = through.wrapping_sub(self.first_kept_number).wrapping_add(1);
+        let count = through.wrapping_sub(self.kept_acknowledged);
         if count > self.kept_sent_ever {
             return;
         }
         for _ in 0..count {
             self.kept_sent_bytes -= self.kept.pop().min(self.kept_sent_bytes);
         }
-        self.first_kept_number = self.first_kept_number.wrapping_add(count);
+        self.kept_acknowledged = through;
         self.kept_sent_ever -= count;
         self.kept_sent = self.kept_sent.saturating_sub(count);
         self.tell_loss(self.newest_sample);
@@ -235,8 +256,8 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
         let waiting = (self.kept.entry(self.kept_sent_bytes), self.passing.entry(0));
         let (entry, delivery, message) = match waiting {
             (Some(kept), passing) if passing.is_none_or(|passing| is_before(kept.order, passing.order)) => {
-                let number = self.first_kept_number.wrapping_add(self.kept_sent);
                 self.kept_sent += 1;
+                let number = self.kept_acknowledged.wrapping_add(self.kept_sent);
                 self.kept_sent_ever = self.kept_sent_ever.max(self.kept_sent);
                 self.kept_sent_bytes = kept.end();
                 (kept, Delivery::Kept { number }, self.kept.message(&kept, &mut buffer))

@@ -22,19 +22,46 @@ use crate::spectrum::SpectrumMeter;
 use crate::staging::Staging;
 use crate::storm::StormGate;
 use crate::trace;
+use core::ops::DerefMut;
 use legwise_protocol::message::{End, EndCause, Gap, GapCause, Message, Settings, Totals};
 
 /// A record and the sample count at which it was made go to one of these.
 pub type Records<'a> = dyn FnMut(&Message, u64) + 'a;
 
-/// All stages.
-#[derive(Debug)]
-pub struct Pipeline {
+/// The stages that hold samples. All bytes of a new one are 0, so that a static one takes no flash.
+#[derive(Debug, Default)]
+pub struct Buffers {
     staging: Staging,
+    meters: Meters,
+}
+
+#[derive(Debug, Default)]
+struct Meters {
+    levels: LevelMeter,
+    snippets: SnippetRing,
+    spectrum: SpectrumMeter,
+}
+
+impl Buffers {
+    /// Empty ones.
+    pub const fn new() -> Self {
+        let meters = Meters {
+            levels: LevelMeter::new(),
+            snippets: SnippetRing::new(),
+            spectrum: SpectrumMeter::new(),
+        };
+        Self { staging: Staging::new(), meters }
+    }
+}
+
+/// All stages. `B` holds the large ones: a `Box`, a `&'static mut`.
+#[derive(Debug)]
+pub struct Pipeline<B> {
+    buffers: B,
     stages: Stages,
 }
 
-/// The stages behind the staging buffers.
+/// The stages that hold a few numbers, and what is watched for.
 #[derive(Debug)]
 struct Stages {
     source: SourceDescription,
@@ -44,35 +71,29 @@ struct Stages {
     limits: LimitCheck,
     storm: StormGate,
     account: Account,
-    levels: LevelMeter,
-    snippets: SnippetRing,
-    spectrum: SpectrumMeter,
     /// Whether a limit was confirmed broken since [`Pipeline::take_alarm`].
     alarm: bool,
 }
 
-impl Pipeline {
-    /// A pipeline for a source. Settings must have passed [`crate::settings::is_valid`]; numbers out of
-    /// range are bounded, not trusted.
-    pub fn new(source: SourceDescription, settings: Settings) -> Self {
-        let staging = Staging::new(&source);
+impl<B: DerefMut<Target = Buffers>> Pipeline<B> {
+    /// A pipeline for a source; what `buffers` held before is forgotten. Settings must have passed
+    /// [`crate::settings::is_valid`]; numbers out of range are bounded, not trusted.
+    pub fn new(mut buffers: B, source: SourceDescription, settings: Settings) -> Self {
+        let Buffers { staging, meters } = &mut *buffers;
+        staging.begin(&source);
+        meters.restart();
         let is_skewed = staging.is_skewed();
-        Self {
-            stages: Stages {
-                config: LimitConfig::new(&settings.limits, &settings.detection, source.legs, is_skewed),
-                source,
-                settings,
-                is_skewed,
-                limits: LimitCheck::default(),
-                storm: StormGate::default(),
-                account: Account::default(),
-                levels: LevelMeter::default(),
-                snippets: SnippetRing::default(),
-                spectrum: SpectrumMeter::default(),
-                alarm: false,
-            },
-            staging,
-        }
+        let stages = Stages {
+            config: LimitConfig::new(&settings.limits, &settings.detection, source.legs, is_skewed),
+            source,
+            settings,
+            is_skewed,
+            limits: LimitCheck::default(),
+            storm: StormGate::default(),
+            account: Account::default(),
+            alarm: false,
+        };
+        Self { buffers, stages }
     }
 
     /// The settings in force.
@@ -81,8 +102,8 @@ impl Pipeline {
     }
 
     /// Index of the pair expected next.
-    pub const fn next_sample(&self) -> u64 {
-        self.staging.next_sample()
+    pub fn next_sample(&self) -> u64 {
+        self.buffers.staging.next_sample()
     }
 
     /// Counts and extremes since the start.
@@ -110,10 +131,10 @@ impl Pipeline {
         }
         let (mut code_a, mut code_b) = (code_a, code_b);
         loop {
-            let used = self.staging.fill(code_a, code_b);
+            let used = self.buffers.staging.fill(code_a, code_b);
             code_a = code_a.get(used..).unwrap_or(&[]);
             code_b = code_b.get(used..).unwrap_or(&[]);
-            if !self.staging.is_full() {
+            if !self.buffers.staging.is_full() {
                 return;
             }
             self.deal(records);
@@ -129,7 +150,7 @@ impl Pipeline {
             self.stages.account.gap(samples);
             records(&Message::Gap(Gap { first_sample: at, samples, cause }), at);
         }
-        self.staging.restart(next_sample);
+        self.buffers.staging.restart(next_sample);
     }
 
     /// Changes what is watched for, from the next pair on. Everything open is finished first.
@@ -152,29 +173,38 @@ impl Pipeline {
     /// Deals with all staged pairs and finishes every interval.
     fn flush(&mut self, records: &mut Records<'_>) {
         while self.deal(records) {}
-        let sample = self.staging.next_sample();
-        self.stages.finish(sample, records);
+        let sample = self.buffers.staging.next_sample();
+        self.stages.finish(&mut self.buffers.meters, sample, records);
     }
 
     /// Deals with one block; `false` when nothing was staged.
     fn deal(&mut self, records: &mut Records<'_>) -> bool {
-        let Some(block) = self.staging.block() else { return false };
-        self.stages.deal(&block, records);
-        self.staging.advance();
+        let Buffers { staging, meters } = &mut *self.buffers;
+        let Some(block) = staging.block() else { return false };
+        self.stages.deal(meters, &block, records);
+        staging.advance();
         true
     }
 }
 
+impl Meters {
+    fn restart(&mut self) {
+        self.levels.restart();
+        self.snippets.restart();
+        self.spectrum.restart();
+    }
+}
+
 impl Stages {
-    fn deal(&mut self, block: &Block<'_>, records: &mut Records<'_>) {
+    fn deal(&mut self, meters: &mut Meters, block: &Block<'_>, records: &mut Records<'_>) {
         let sample = block.end_sample();
         let records = &mut |message: &Message| records(message, sample);
         let edge_step = i32::try_from(self.settings.detection.edge_step_uv).unwrap_or(i32::MAX);
         let settled = if self.is_skewed { settled_twice_cm(block, edge_step) } else { block.spans.twice_cm };
 
-        self.snippets.take(block);
-        self.check_limits(block, records);
-        self.snippets.pass(records);
+        meters.snippets.take(block);
+        self.check_limits(&mut meters.snippets, block, records);
+        meters.snippets.pass(records);
         self.storm.pass(sample, &self.settings.detection, records);
 
         self.account.take(block, settled);
@@ -182,20 +212,25 @@ impl Stages {
         if self.account.interval_samples() >= reporting.summary_samples {
             self.finish_summary(records);
         }
-        self.levels.take(block, self.settings.detection.idle_below_uv);
-        if self.levels.samples() >= reporting.levels_samples {
-            self.finish_levels(records);
+        meters.levels.take(block, self.settings.detection.idle_below_uv);
+        if meters.levels.samples() >= reporting.levels_samples {
+            self.finish_levels(&mut meters.levels, records);
         }
         if reporting.spectrum_segments > 0 {
-            self.spectrum.take(block, reporting.spectrum_skip);
-            if self.spectrum.segments() >= reporting.spectrum_segments {
-                self.spectrum.finish(self.source.sample_rate_mhz, records);
+            meters.spectrum.take(block, reporting.spectrum_skip);
+            if meters.spectrum.segments() >= reporting.spectrum_segments {
+                meters.spectrum.finish(self.source.sample_rate_mhz, records);
             }
         }
     }
 
-    fn check_limits(&mut self, block: &Block<'_>, records: &mut dyn FnMut(&Message)) {
-        let Self { limits, storm, snippets, settings, config, alarm, .. } = self;
+    fn check_limits(
+        &mut self,
+        snippets: &mut SnippetRing,
+        block: &Block<'_>,
+        records: &mut dyn FnMut(&Message),
+    ) {
+        let Self { limits, storm, settings, config, alarm, .. } = self;
         limits.check(config, block, &mut |event| match event {
             LimitEvent::Begun { number, sample } => {
                 trace::begun(number, sample);
@@ -215,13 +250,13 @@ impl Stages {
         records(&Message::Summary(self.account.finish_interval(&self.limits.counts(), alarm)));
     }
 
-    fn finish_levels(&mut self, records: &mut dyn FnMut(&Message)) {
-        records(&Message::Levels(self.levels.finish(self.settings.detection.idle_below_uv)));
+    fn finish_levels(&mut self, levels: &mut LevelMeter, records: &mut dyn FnMut(&Message)) {
+        records(&Message::Levels(levels.finish(self.settings.detection.idle_below_uv)));
         records(&Message::Totals(self.account.totals(&self.limits.counts())));
     }
 
     /// Finishes whatever is open: a gap, a change of settings or the end follows.
-    fn finish(&mut self, sample: u64, records: &mut Records<'_>) {
+    fn finish(&mut self, meters: &mut Meters, sample: u64, records: &mut Records<'_>) {
         let records = &mut |message: &Message| records(message, sample);
         let Self { limits, storm, settings, config, alarm, .. } = self;
         limits.cut(&mut |event| {
@@ -231,14 +266,14 @@ impl Stages {
             }
         });
         self.storm.finish(records);
-        self.snippets.finish(records);
+        meters.snippets.finish(records);
         if self.account.interval_samples() > 0 {
             self.finish_summary(records);
         }
-        if self.levels.samples() > 0 {
-            self.finish_levels(records);
+        if meters.levels.samples() > 0 {
+            self.finish_levels(&mut meters.levels, records);
         }
-        self.spectrum.finish(self.source.sample_rate_mhz, records);
-        self.spectrum.break_off();
+        meters.spectrum.finish(self.source.sample_rate_mhz, records);
+        meters.spectrum.break_off();
     }
 }

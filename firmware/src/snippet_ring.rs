@@ -50,6 +50,13 @@ pub struct SnippetRing {
 
 impl Default for SnippetRing {
     fn default() -> Self {
+        Self::new()
+    }
+}
+
+impl SnippetRing {
+    /// An empty ring.
+    pub const fn new() -> Self {
         Self {
             leg_a: [0; RING],
             leg_b: [0; RING],
@@ -60,9 +67,14 @@ impl Default for SnippetRing {
             captured_in_window: 0,
         }
     }
-}
 
-impl SnippetRing {
+    /// Forgets everything.
+    pub fn restart(&mut self) {
+        (self.oldest_sample, self.end_sample) = (0, 0);
+        self.capture = None;
+        (self.window, self.captured_in_window) = (0, 0);
+    }
+
     /// Takes a block into the ring.
     pub fn take(&mut self, block: &Block<'_>) {
         if block.first_sample != self.end_sample {

@@ -1,6 +1,6 @@
 //! Where sample pairs come from: the first of the two hardware traits.
 
-use legwise_protocol::message::LegScale;
+use legwise_protocol::message::{GapCause, LegScale};
 
 /// What a source is, as far as the pipeline must know. Constant while the source lives.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -27,8 +27,8 @@ pub enum Taken {
         first_sample: u64,
         /// How many, at most the length of the buffers.
         pairs: usize,
-        /// Whether pairs were lost since the call before because they were not taken in time.
-        is_overrun: bool,
+        /// Why pairs before these are missing, or may be; `None` when none are known to be.
+        gap: Option<GapCause>,
     },
     /// There will be no more pairs.
     Finished,
@@ -40,7 +40,8 @@ pub enum Taken {
 /// * Pairs are numbered from the start of sampling by a 64-bit index that counts *every* sampling
 ///   instant, taken away or not: the index is the clock of everything downstream.
 /// * `take` never waits. Called at least once per half of the sampling buffer, it must not lose pairs;
-///   when it does, the next call says `is_overrun` and jumps the index by the number lost.
+///   when it does, the next call says [`GapCause::Overrun`] and jumps the index by the number lost (by
+///   none where the number is not known). A channel order found again is [`GapCause::Resynchronised`].
 /// * Both legs of a pair belong to the same index. A leg sampled later says so by `skew_ns`.
 /// * Codes are raw: do not calibrate, filter or clip them.
 ///

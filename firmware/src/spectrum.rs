@@ -60,6 +60,13 @@ pub struct SpectrumMeter {
 
 impl Default for SpectrumMeter {
     fn default() -> Self {
+        Self::new()
+    }
+}
+
+impl SpectrumMeter {
+    /// No segment yet.
+    pub const fn new() -> Self {
         Self {
             twice_cm: [0; POINTS],
             dm: [0; POINTS],
@@ -75,9 +82,13 @@ impl Default for SpectrumMeter {
             transformed: [Complex::ZERO; POINTS],
         }
     }
-}
 
-impl SpectrumMeter {
+    /// Forgets the average and the segment under construction.
+    pub fn restart(&mut self) {
+        self.clear();
+        self.break_off();
+    }
+
     /// Segments in the average so far.
     pub const fn segments(&self) -> u32 {
         self.segments
@@ -122,10 +133,14 @@ impl SpectrumMeter {
             self.send(Mode::Common, &self.common, scale, records);
             self.send(Mode::Differential, &self.differential, scale, records);
         }
+        self.clear();
+    }
+
+    fn clear(&mut self) {
         self.segments = 0;
         self.skipped = 0;
-        self.common = [0.0; BINS];
-        self.differential = [0.0; BINS];
+        self.common.fill(0.0);
+        self.differential.fill(0.0);
     }
 
     /// Keeps the second half as the first of the next segment, or passes over some.

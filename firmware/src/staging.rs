@@ -26,12 +26,18 @@ pub struct Staging {
     dm: [i32; ALIGNED],
 }
 
+impl Default for Staging {
+    fn default() -> Self {
+        Self::new()
+    }
+}
+
 impl Staging {
-    /// Empty buffers for a source.
-    pub fn new(source: &SourceDescription) -> Self {
+    /// Empty buffers, for no source yet: all bytes are 0.
+    pub const fn new() -> Self {
         Self {
-            legs: source.legs.map(Calibration::new),
-            aligner: Aligner::new(source.skew_ns, source.sample_rate_mhz),
+            legs: [Calibration::UNSET; 2],
+            aligner: Aligner::UNSET,
             first_sample: 0,
             staged: 0,
             has_history: false,
@@ -44,6 +50,13 @@ impl Staging {
             twice_cm: [0; BLOCK_PAIRS],
             dm: [0; ALIGNED],
         }
+    }
+
+    /// Starts afresh with a source.
+    pub fn begin(&mut self, source: &SourceDescription) {
+        self.legs = source.legs.map(Calibration::new);
+        self.aligner = Aligner::new(source.skew_ns, source.sample_rate_mhz);
+        self.restart(0);
     }
 
     /// Whether the source declared a skew between the legs.

@@ -4,7 +4,8 @@
 
 use legwise_firmware::alarm::{AlarmPin, NoPin};
 use legwise_firmware::link::Link;
-use legwise_firmware::monitor::{Identity, Monitor, Step, StepError};
+use legwise_firmware::monitor::{Identity, Memory, Monitor, Step, StepError};
+use legwise_firmware::pipeline::Buffers;
 use legwise_firmware::source::PairSource;
 use legwise_protocol::command::{Command, Request};
 use legwise_protocol::framing::{self, REQUEST_FRAME_BYTES};
@@ -48,7 +49,7 @@ impl Link for MemoryPipe {
 /// A board made of a source and the firmware.
 #[derive(Debug)]
 pub struct VirtualBoard<S> {
-    monitor: Box<Monitor<S, MemoryPipe, NoPin, KEPT_BYTES, PASSING_BYTES>>,
+    monitor: Monitor<S, MemoryPipe, NoPin, Box<Buffers>, Box<Memory<KEPT_BYTES, PASSING_BYTES>>>,
     commands: u32,
 }
 
@@ -58,7 +59,12 @@ impl<S: PairSource> VirtualBoard<S> {
         let identity = Identity { boot_id, board, serial: 0, reset_cause: ResetCause::Software };
         let Ok(alarm) = AlarmPin::new(NoPin, 0);
         Self {
-            monitor: Box::new(Monitor::new(identity, source, MemoryPipe::default(), alarm, settings)),
+            monitor: Monitor::new(
+                identity,
+                settings,
+                (source, MemoryPipe::default(), alarm),
+                (Box::default(), Box::default()),
+            ),
             commands: 0,
         }
     }

@@ -35,7 +35,7 @@ fn quiet(board: &SourceDescription) -> (Vec<i32>, Vec<i32>) {
 fn best_rate(board: SourceDescription, settings: Settings, legs: &(Vec<i32>, Vec<i32>)) -> (f64, u64, u64) {
     let (mut best, mut messages, mut outside) = (0.0_f64, 0, 0);
     for _ in 0..5 {
-        let mut pipeline = Box::new(Pipeline::new(board, settings));
+        let mut pipeline = Pipeline::new(Box::default(), board, settings);
         messages = 0;
         let start = Instant::now();
         let records = &mut |_: &_, _| messages += 1;

@@ -1,6 +1,6 @@
 //! A pipeline whose records are kept, with shorthand for picking them.
 
-use legwise_firmware::pipeline::Pipeline;
+use legwise_firmware::pipeline::{Buffers, Pipeline};
 use legwise_firmware::source::SourceDescription;
 use legwise_protocol::message::{
     EndCause, Excursion, GapCause, Levels, Message, Mode, Settings, SpectrumPart, Storm, Totals,
@@ -14,7 +14,7 @@ pub type Record = (Message, u64);
 #[derive(Debug)]
 pub struct Recorder {
     /// The pipeline.
-    pub pipeline: Box<Pipeline>,
+    pub pipeline: Pipeline<Box<Buffers>>,
     /// What it said, in order.
     pub records: Vec<Record>,
 }
@@ -22,7 +22,7 @@ pub struct Recorder {
 impl Recorder {
     /// A fresh pipeline.
     pub fn new(board: SourceDescription, settings: Settings) -> Self {
-        Self { pipeline: Box::new(Pipeline::new(board, settings)), records: Vec::new() }
+        Self { pipeline: Pipeline::new(Box::default(), board, settings), records: Vec::new() }
     }
 
     /// Feeds pairs that follow without a hole.

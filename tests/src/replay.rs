@@ -5,6 +5,7 @@
 
 use legwise_firmware::block::BLOCK_PAIRS;
 use legwise_firmware::source::{PairSource, SourceDescription, Taken};
+use legwise_protocol::message::GapCause;
 use std::convert::Infallible;
 use std::io::{self, Write};
 use std::path::Path;
@@ -49,7 +50,7 @@ impl Replay {
         loop {
             let (mut leg_a, mut leg_b) = (vec![0; BLOCK_PAIRS], vec![0; BLOCK_PAIRS]);
             let Ok(taken) = source.take(&mut leg_a, &mut leg_b);
-            let Taken::Pairs { first_sample, pairs, is_overrun } = taken else { break };
+            let Taken::Pairs { first_sample, pairs, gap } = taken else { break };
             leg_a.truncate(pairs);
             leg_b.truncate(pairs);
             number += 1;
@@ -57,7 +58,7 @@ impl Replay {
                 was_lost = true;
                 continue;
             }
-            let is_overrun = is_overrun | std::mem::take(&mut was_lost);
+            let is_overrun = gap.is_some() | std::mem::take(&mut was_lost);
             deliveries.push(Delivery { first_sample, is_overrun, leg_a, leg_b });
         }
         Self { description: source.describe(), receiver, boot_id, deliveries, next: 0 }
@@ -113,6 +114,10 @@ impl PairSource for Replay {
         let pairs = delivery.leg_a.len();
         leg_a[..pairs].copy_from_slice(&delivery.leg_a);
         leg_b[..pairs].copy_from_slice(&delivery.leg_b);
-        Ok(Taken::Pairs { first_sample: delivery.first_sample, pairs, is_overrun: delivery.is_overrun })
+        Ok(Taken::Pairs {
+            first_sample: delivery.first_sample,
+            pairs,
+            gap: delivery.is_overrun.then_some(GapCause::Overrun),
+        })
     }
 }

@@ -2,6 +2,7 @@
 
 use core::convert::Infallible;
 use legwise_firmware::source::{PairSource, SourceDescription, Taken};
+use legwise_protocol::message::GapCause;
 
 /// Plays two slices in deliveries of given lengths; pairs inside a hole are never handed out.
 #[derive(Clone, Debug)]
@@ -43,12 +44,12 @@ impl PairSource for HoledSource {
         if length == 0 {
             return Ok(Taken::Nothing);
         }
-        let mut is_overrun = false;
+        let mut gap = None;
         if let Some(&(_, missing, is_called_overrun)) =
             self.holes.iter().find(|hole| hole.0 == self.next_sample && hole.1 > 0)
         {
             self.next_sample += missing;
-            is_overrun = is_called_overrun;
+            gap = is_called_overrun.then_some(GapCause::Overrun);
         }
         let until_hole = self.holes.iter().map(|hole| hole.0).find(|&at| at > self.next_sample);
         let end = until_hole.unwrap_or(self.leg_a.len()).min(self.leg_a.len());
@@ -60,6 +61,6 @@ impl PairSource for HoledSource {
         leg_a[..pairs].copy_from_slice(&self.leg_a[range.clone()]);
         leg_b[..pairs].copy_from_slice(&self.leg_b[range.clone()]);
         self.next_sample = range.end;
-        Ok(Taken::Pairs { first_sample: range.start as u64, pairs, is_overrun })
+        Ok(Taken::Pairs { first_sample: range.start as u64, pairs, gap })
     }
 }

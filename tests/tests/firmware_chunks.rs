@@ -3,7 +3,8 @@
 
 use legwise_firmware::alarm::{AlarmPin, NoPin};
 use legwise_firmware::fakes::MemoryLink;
-use legwise_firmware::monitor::{Identity, Monitor, Step};
+use legwise_firmware::monitor::{Identity, Memory, Monitor, Step};
+use legwise_firmware::pipeline::Buffers;
 use legwise_firmware::settings;
 use legwise_firmware::source::SourceDescription;
 use legwise_protocol::decoder::DeviceDecoder;
@@ -148,7 +149,7 @@ proptest! {
     }
 }
 
-type TestMonitor = Monitor<HoledSource, MemoryLink<4_096>, NoPin, 65_536, 65_536>;
+type TestMonitor = Monitor<HoledSource, MemoryLink<4_096>, NoPin, Box<Buffers>, Box<Memory<65_536, 65_536>>>;
 
 /// Runs a whole device; `drains` are the bytes the host takes away after each step, repeated.
 fn run_device(
@@ -161,8 +162,12 @@ fn run_device(
     let identity = Identity { boot_id: 7, board: "bench", serial: 1, reset_cause: ResetCause::PowerOn };
     let source = HoledSource::new(board, legs.0.clone(), legs.1.clone(), holes.to_vec(), deliveries.to_vec());
     let alarm = AlarmPin::new(NoPin, 0).unwrap();
-    let mut monitor =
-        Box::new(TestMonitor::new(identity, source, MemoryLink::new(), alarm, usual_settings()));
+    let mut monitor = TestMonitor::new(
+        identity,
+        usual_settings(),
+        (source, MemoryLink::new(), alarm),
+        (Box::default(), Box::default()),
+    );
     let (mut decoder, mut frames) = (DeviceDecoder::new(), Vec::new());
     let mut drains = drains.iter().copied().cycle();
     loop {

@@ -5,7 +5,8 @@ use core::convert::Infallible;
 use embedded_hal::digital::{ErrorType, OutputPin};
 use legwise_firmware::alarm::AlarmPin;
 use legwise_firmware::fakes::MemoryLink;
-use legwise_firmware::monitor::{Identity, Monitor, Step};
+use legwise_firmware::monitor::{Identity, Memory, Monitor, Step};
+use legwise_firmware::pipeline::Buffers;
 use legwise_firmware::settings;
 use legwise_protocol::command::{Command, Request};
 use legwise_protocol::decoder::DeviceDecoder;
@@ -40,7 +41,7 @@ impl OutputPin for FakePin {
 
 /// A device, the host's end of its link, and its pin.
 struct Bench {
-    monitor: Box<Monitor<HoledSource, MemoryLink<16_384>, FakePin, 32_768, 32_768>>,
+    monitor: Monitor<HoledSource, MemoryLink<16_384>, FakePin, Box<Buffers>, Box<Memory<32_768, 32_768>>>,
     decoder: DeviceDecoder,
     pin: FakePin,
     /// State of the pin after each step.
@@ -66,7 +67,8 @@ impl Bench {
         let pin = FakePin::default();
         let alarm = AlarmPin::new(pin.clone(), hold_samples).unwrap();
         let link = MemoryLink::new();
-        let monitor = Box::new(Monitor::new(identity, source, link, alarm, usual_settings()));
+        let monitor =
+            Monitor::new(identity, usual_settings(), (source, link, alarm), (Box::default(), Box::default()));
         Self { monitor, decoder: DeviceDecoder::new(), pin, pin_states: Vec::new(), sequence: 0 }
     }
 

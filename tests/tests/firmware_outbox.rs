@@ -52,9 +52,16 @@ fn losses(frames: &[DeviceFrame]) -> Vec<Loss> {
     frames.iter().filter_map(loss).collect()
 }
 
+/// An empty outbox of boot 5.
+fn outbox<const KEPT: usize, const PASSING: usize>() -> Outbox<KEPT, PASSING> {
+    let mut outbox = Outbox::new();
+    outbox.begin(5);
+    outbox
+}
+
 #[test]
 fn both_classes_leave_in_the_order_they_were_made() {
-    let mut outbox = Outbox::<8_192, 8_192>::new(5);
+    let mut outbox = outbox::<8_192, 8_192>();
     let made = [gap(0), summary(1), summary(2), gap(3), snippet(), summary(5), gap(6)];
     for (sample, message) in made.iter().enumerate() {
         outbox.record(message, sample as u64);
@@ -71,7 +78,7 @@ fn both_classes_leave_in_the_order_they_were_made() {
 
 #[test]
 fn kept_messages_are_sent_again_with_their_numbers_until_acknowledged() {
-    let mut outbox = Outbox::<8_192, 8_192>::new(5);
+    let mut outbox = outbox::<8_192, 8_192>();
     for at in 0..6 {
         outbox.record(&gap(at), at);
         outbox.record(&summary(at), at);
@@ -97,7 +104,7 @@ fn kept_messages_are_sent_again_with_their_numbers_until_acknowledged() {
 
 #[test]
 fn acknowledgements_of_numbers_never_sent_or_long_forgotten_change_nothing() {
-    let mut outbox = Outbox::<8_192, 8_192>::new(5);
+    let mut outbox = outbox::<8_192, 8_192>();
     for at in 0..4 {
         outbox.record(&gap(at), at);
     }
@@ -120,7 +127,7 @@ fn acknowledgements_of_numbers_never_sent_or_long_forgotten_change_nothing() {
 #[test]
 fn a_number_sent_before_a_repetition_may_still_be_acknowledged() {
     // WIRE.md section 8 rule 8: only beyond the highest number sent is an acknowledgement ignored.
-    let mut outbox = Outbox::<8_192, 8_192>::new(5);
+    let mut outbox = outbox::<8_192, 8_192>();
     for at in 0..5 {
         outbox.record(&gap(at), at);
     }
@@ -137,7 +144,7 @@ fn a_number_sent_before_a_repetition_may_still_be_acknowledged() {
 
 #[test]
 fn oldest_passing_messages_are_shed_first_and_leave_holes_in_the_sequence() {
-    let mut outbox = SmallBox::new(5);
+    let mut outbox: SmallBox = outbox();
     outbox.record(&gap(0), 0);
     let made = 100;
     for at in 1..=made {
@@ -162,7 +169,7 @@ fn oldest_passing_messages_are_shed_first_and_leave_holes_in_the_sequence() {
 
 #[test]
 fn snippets_are_refused_before_other_kept_messages_and_the_loss_is_told() {
-    let mut outbox = SmallBox::new(5);
+    let mut outbox: SmallBox = outbox();
     for at in 0..5 {
         outbox.record(&snippet(), at);
     }
@@ -182,7 +189,7 @@ fn snippets_are_refused_before_other_kept_messages_and_the_loss_is_told() {
 
 #[test]
 fn a_loss_is_told_as_soon_as_an_acknowledgement_makes_room_though_nothing_else_happens() {
-    let mut outbox = SmallBox::new(5);
+    let mut outbox: SmallBox = outbox();
     let made = 300;
     for at in 0..made {
         outbox.record(&gap(at), at);

@@ -16,6 +16,7 @@ use crate::source::{PairSource, SourceDescription, Taken};
 use core::fmt;
 use embedded_hal::{digital, spi};
 use heapless::spsc::{Consumer, Producer, Queue};
+use legwise_protocol::message::GapCause;
 
 /// What went wrong between the microcontroller and the converter. Sampling goes on; ask again.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -74,7 +75,7 @@ impl<const N: usize> HandOver<N> {
         let (producer, consumer) = self.0.split();
         let sender =
             PairSender { queue: producer, lost: 0, is_overrun: false, untold: None, is_failing: false };
-        (sender, QueuedSource { queue: consumer, description, next_sample: 0, is_overrun: false, held: None })
+        (sender, QueuedSource { queue: consumer, description, next_sample: 0, gap: None, held: None })
     }
 }
 
@@ -152,7 +153,7 @@ pub struct QueuedSource<'a> {
     queue: Consumer<'a, Item>,
     description: SourceDescription,
     next_sample: u64,
-    is_overrun: bool,
+    gap: Option<GapCause>,
     /// What ended the last delivery.
     held: Option<Item>,
 }
@@ -183,7 +184,7 @@ impl PairSource for QueuedSource<'_> {
         }
         let first_sample = self.next_sample;
         self.next_sample += pairs as u64;
-        Ok(Taken::Pairs { first_sample, pairs, is_overrun: core::mem::take(&mut self.is_overrun) })
+        Ok(Taken::Pairs { first_sample, pairs, gap: self.gap.take() })
     }
 }
 
@@ -195,7 +196,9 @@ impl QueuedSource<'_> {
                 Some(Item::Pair(pair)) => return Ok(Some(pair)),
                 Some(Item::Lost { pairs, is_overrun }) => {
                     self.next_sample = self.next_sample.saturating_add(u64::from(pairs));
-                    self.is_overrun |= is_overrun;
+                    if is_overrun {
+                        self.gap = Some(GapCause::Overrun);
+                    }
                 }
                 Some(Item::Failed(error)) => return Err(error),
                 None => return Ok(None),
@@ -220,12 +223,12 @@ mod tests {
     fn drain(source: &mut QueuedSource<'_>, room: usize) -> (Vec<(u64, i32)>, bool) {
         let (mut got, mut any_overrun) = (Vec::new(), false);
         let (mut a, mut b) = (vec![0; room], vec![0; room]);
-        while let Taken::Pairs { first_sample, pairs, is_overrun } = source.take(&mut a, &mut b).unwrap() {
+        while let Taken::Pairs { first_sample, pairs, gap } = source.take(&mut a, &mut b).unwrap() {
             for (index, (&a, &b)) in (first_sample..).zip(a.iter().zip(&b)).take(pairs) {
                 assert_eq!(b, -a, "both codes of a pair stay together");
                 got.push((index, a));
             }
-            any_overrun |= is_overrun;
+            any_overrun |= gap == Some(GapCause::Overrun);
         }
         (got, any_overrun)
     }
@@ -290,7 +293,7 @@ mod tests {
         }
         sender.put([6, -6]);
         let (mut a, mut b) = ([0; 8], [0; 8]);
-        let pairs = |first_sample| Ok(Taken::Pairs { first_sample, pairs: 1, is_overrun: false });
+        let pairs = |first_sample| Ok(Taken::Pairs { first_sample, pairs: 1, gap: None });
         assert_eq!(source.take(&mut a, &mut b), pairs(0));
         assert_eq!(source.take(&mut a, &mut b), Err(BUS));
         assert_eq!(source.take(&mut a, &mut b), pairs(6));

@@ -17,6 +17,7 @@ use super::counter::nearest;
 use super::ring_reader::RingReader;
 use super::scan::{LONGEST_SCAN, Scan, ScanLayout};
 use crate::source::{PairSource, SourceDescription, Taken};
+use legwise_protocol::message::GapCause;
 
 /// How far ring position and clock may disagree before sampling counts as broken off: a conversion
 /// under way is counted by the clock and not yet in the ring, and reading both takes time. Whole scans
@@ -108,7 +109,7 @@ pub struct CircularSource<C, L> {
     /// Index of the scan at place 0 after the last restart.
     first_sample: u64,
     is_running: bool,
-    is_overrun: bool,
+    gap: Option<GapCause>,
     restarts_in_a_row: u32,
     progress: u64,
     counts: CircularCounts,
@@ -129,7 +130,7 @@ where
             reader,
             first_sample: 0,
             is_running: false,
-            is_overrun: false,
+            gap: None,
             restarts_in_a_row: 0,
             progress: 0,
             counts: CircularCounts::default(),
@@ -169,7 +170,11 @@ where
             Trouble::WrongMarker => (&mut counts.wrong_markers, CircularError::MarkerLost),
         };
         *count = count.saturating_add(1);
-        self.is_overrun |= trouble != Trouble::WrongMarker;
+        self.gap = Some(match (trouble, self.gap) {
+            (Trouble::WrongMarker, None) => GapCause::Resynchronised,
+            (Trouble::WrongMarker, Some(before)) => before,
+            (Trouble::LostReading | Trouble::Stalled, _) => GapCause::Overrun,
+        });
         self.is_running = false;
         self.restarts_in_a_row = self.restarts_in_a_row.saturating_add(1);
         if self.restarts_in_a_row >= RESTARTS_BEFORE_ERROR { Err(error) } else { Ok(Taken::Nothing) }
@@ -235,7 +240,7 @@ where
         if ready.lost_scans > 0 {
             self.counts.overruns = self.counts.overruns.saturating_add(1);
             self.progress += ready.lost_scans;
-            self.is_overrun = true;
+            self.gap = Some(GapCause::Overrun);
         }
         if ready.scans < wanted || wanted == 0 {
             return Ok(Taken::Nothing);
@@ -273,7 +278,7 @@ where
             return stopped;
         }
         self.restarts_in_a_row = 0;
-        Ok(Taken::Pairs { first_sample, pairs, is_overrun: core::mem::take(&mut self.is_overrun) })
+        Ok(Taken::Pairs { first_sample, pairs, gap: self.gap.take() })
     }
 }
 

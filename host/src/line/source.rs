@@ -210,7 +210,7 @@ impl PairSource for LineSource {
             pairs += count;
             self.next += count as u64;
         }
-        Ok(Taken::Pairs { first_sample, pairs, is_overrun: false })
+        Ok(Taken::Pairs { first_sample, pairs, gap: None })
     }
 }
 

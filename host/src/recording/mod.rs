@@ -213,11 +213,7 @@ impl PairSource for Recording {
         };
         if filled.pairs > 0 {
             self.held_error = filled.fault;
-            return Ok(Taken::Pairs {
-                first_sample: filled.first_sample,
-                pairs: filled.pairs,
-                is_overrun: false,
-            });
+            return Ok(Taken::Pairs { first_sample: filled.first_sample, pairs: filled.pairs, gap: None });
         }
         self.is_spent = true;
         filled.fault.map_or(Ok(Taken::Finished), Err)

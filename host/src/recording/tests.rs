@@ -72,8 +72,8 @@ fn drain<S: PairSource>(source: &mut S, chunk: usize) -> (Vec<Pair>, Result<(), 
             Ok(Taken::Nothing) => {}
             Ok(Taken::Finished) => return (pairs, Ok(())),
             Err(error) => return (pairs, Err(error)),
-            Ok(Taken::Pairs { first_sample, pairs: count, is_overrun }) => {
-                assert!(!is_overrun && count <= chunk);
+            Ok(Taken::Pairs { first_sample, pairs: count, gap }) => {
+                assert!(gap.is_none() && count <= chunk);
                 let codes = a[..count].iter().zip(&b[..count]);
                 pairs.extend((first_sample..).zip(codes).map(|(sample, (&code_a, &code_b))| {
                     (sample, scale_a.microvolts(code_a), scale_b.microvolts(code_b))
@@ -129,6 +129,6 @@ impl PairSource for Codes {
             count += 1;
         }
         self.next += count;
-        Ok(Taken::Pairs { first_sample, pairs: count, is_overrun: false })
+        Ok(Taken::Pairs { first_sample, pairs: count, gap: None })
     }
 }

@@ -8,7 +8,8 @@ use crate::terminal;
 use legwise_firmware::alarm::{AlarmPin, NoPin};
 use legwise_firmware::fakes::MICROVOLT_CODES;
 use legwise_firmware::link::Link;
-use legwise_firmware::monitor::{Identity, Monitor, Step};
+use legwise_firmware::monitor::{Identity, Memory, Monitor, Step};
+use legwise_firmware::pipeline::Buffers;
 use legwise_firmware::settings;
 use legwise_firmware::source::{PairSource, SourceDescription, Taken};
 use legwise_protocol::command::Command;
@@ -125,8 +126,8 @@ fn run(
     let identity = Identity { boot_id: 4711, board: "played", serial: 9, reset_cause: ResetCause::PowerOn };
     let settings = settings::for_receiver(&receivers::TABLE[0], description.sample_rate_mhz);
     let Ok(alarm) = AlarmPin::new(NoPin, 0);
-    let mut monitor =
-        Box::new(Monitor::<_, _, _, 65_536, 16_384>::new(identity, source, link, alarm, settings));
+    let memory = (Box::<Buffers>::default(), Box::<Memory<65_536, 16_384>>::default());
+    let mut monitor = Monitor::new(identity, settings, (source, link, alarm), memory);
     let mut has_told = false;
     while unplugged.try_recv() == Err(TryRecvError::Empty) {
         match monitor.step() {
@@ -169,7 +170,7 @@ impl PairSource for HeldSource {
         leg_a[..pairs].copy_from_slice(&self.script.leg_a[range.clone()]);
         leg_b[..pairs].copy_from_slice(&self.script.leg_b[range.clone()]);
         self.next = range.end;
-        Ok(Taken::Pairs { first_sample: range.start as u64, pairs, is_overrun: false })
+        Ok(Taken::Pairs { first_sample: range.start as u64, pairs, gap: None })
     }
 }
 

@@ -16,7 +16,7 @@ use core::ffi::c_int;
 use cortex_m_semihosting::{nr, syscall1};
 use legwise_firmware::block::BLOCK_PAIRS;
 use legwise_firmware::source::{PairSource, SourceDescription, Taken};
-use legwise_protocol::message::LegScale;
+use legwise_protocol::message::{GapCause, LegScale};
 
 const MAGIC: &[u8; 8] = b"LWREPLAY";
 const LEG_BYTES: usize = 28;
@@ -147,13 +147,13 @@ impl PairSource for Replay<'_> {
         let mut fields = Fields(&delivery);
         let first_sample = u64::from_le_bytes(fields.take());
         let pairs = fields.u32() as usize;
-        let is_overrun = fields.u32() != 0;
+        let gap = (fields.u32() != 0).then_some(GapCause::Overrun);
         if pairs > leg_a.len().min(leg_b.len()) {
             return Err(ReplayError::WrongFile);
         }
         self.read_leg(leg_a, pairs)?;
         self.read_leg(leg_b, pairs)?;
-        Ok(Taken::Pairs { first_sample, pairs, is_overrun })
+        Ok(Taken::Pairs { first_sample, pairs, gap })
     }
 }
 

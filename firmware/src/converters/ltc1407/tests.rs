@@ -4,7 +4,7 @@
 use super::super::hand_over::{HandOver, QueuedSource};
 use super::*;
 use crate::front_end::Divider;
-use crate::pipeline::Pipeline;
+use crate::pipeline::{Buffers, Pipeline};
 use crate::settings;
 use crate::source::{PairSource, Taken};
 use embedded_hal::spi::{self, Operation};
@@ -13,6 +13,7 @@ use embedded_hal_mock::eh1::digital::{Mock as PinMock, State, Transaction as Pin
 use embedded_hal_mock::eh1::spi::{Mock as SpiMock, Transaction as SpiStep};
 use legwise_protocol::limits::{LimitSet, Window};
 use legwise_protocol::message::{Excursion, Gap, GapCause, Message};
+use std::boxed::Box;
 use std::cell::RefCell;
 use std::io;
 use std::rc::Rc;
@@ -325,7 +326,7 @@ fn the_pipeline_finds_an_excursion_at_the_very_tick_and_the_overrun_as_a_gap() {
     let limits = LimitSet { terminal: Some(window), average: None };
     let mut settings = settings::for_limits(limits, CONFIG.sample_rate_mhz);
     settings.reporting.snippet_after = 0;
-    let mut pipeline = Pipeline::new(source.describe(), settings);
+    let mut pipeline = Pipeline::new(Box::<Buffers>::default(), source.describe(), settings);
     let (mut excursions, mut gaps) = (Vec::<Excursion>::new(), Vec::<Gap>::new());
     let mut records = |message: &Message, _: u64| match message {
         Message::Excursion(excursion) => excursions.push(*excursion),
@@ -339,8 +340,8 @@ fn the_pipeline_finds_an_excursion_at_the_very_tick_and_the_overrun_as_a_gap() {
         if (5000..6000).contains(&tick) {
             continue;
         }
-        while let Taken::Pairs { first_sample, pairs, is_overrun } = source.take(&mut a, &mut b).unwrap() {
-            let cause = if is_overrun { GapCause::Overrun } else { GapCause::Skipped };
+        while let Taken::Pairs { first_sample, pairs, gap } = source.take(&mut a, &mut b).unwrap() {
+            let cause = gap.unwrap_or(GapCause::Skipped);
             pipeline.take(first_sample, &a[..pairs], &b[..pairs], cause, &mut records);
         }
     }

@@ -131,15 +131,15 @@ fn source() -> FakeSource {
 }
 
 /// Asks once; a delivery's index, length and overrun mark, after every pair was held against the truth.
-fn take(source: &mut FakeSource) -> Result<Option<(u64, usize, bool)>, CircularError> {
+fn take(source: &mut FakeSource) -> Result<Option<(u64, usize, Option<GapCause>)>, CircularError> {
     let (mut a, mut b) = ([0; WANTED], [0; WANTED]);
     match source.take(&mut a, &mut b)? {
-        Taken::Pairs { first_sample, pairs, is_overrun } => {
+        Taken::Pairs { first_sample, pairs, gap } => {
             for (n, instant) in (first_sample..).take(pairs).enumerate() {
                 let [true_a, true_b, _] = truth(instant).map(i32::from);
                 assert_eq!((a[n], b[n]), (true_a, true_b), "instant {instant}");
             }
-            Ok(Some((first_sample, pairs, is_overrun)))
+            Ok(Some((first_sample, pairs, gap)))
         }
         Taken::Nothing => Ok(None),
         Taken::Finished => unreachable!("a converter has no end"),
@@ -147,7 +147,7 @@ fn take(source: &mut FakeSource) -> Result<Option<(u64, usize, bool)>, CircularE
 }
 
 /// Lets scans pass one by one and takes whatever comes; deliveries in order.
-fn run(source: &mut FakeSource, scans: u64) -> Vec<(u64, usize, bool)> {
+fn run(source: &mut FakeSource, scans: u64) -> Vec<(u64, usize, Option<GapCause>)> {
     let mut deliveries = Vec::new();
     for _ in 0..scans {
         source.converter_mut().pass(WORDS);
@@ -161,8 +161,8 @@ fn a_reader_in_time_gets_every_pair_in_order() {
     let mut source = source();
     let deliveries = run(&mut source, 5000);
     let first = deliveries[0].0;
-    for (n, &(index, pairs, is_overrun)) in deliveries.iter().enumerate() {
-        assert_eq!((index, pairs, is_overrun), (first + (n * WANTED) as u64, WANTED, false));
+    for (n, &(index, pairs, gap)) in deliveries.iter().enumerate() {
+        assert_eq!((index, pairs, gap), (first + (n * WANTED) as u64, WANTED, None));
     }
     assert!(deliveries.len() > 600);
     assert_eq!(source.counts(), CircularCounts::default());
@@ -176,10 +176,10 @@ fn an_overrun_of_any_number_of_laps_jumps_the_index_by_what_was_lost() {
         let (index, pairs, _) = *run(&mut source, 100).last().unwrap();
         source.converter_mut().pass(late_ticks);
         // The truth of every delivered pair is checked by `take`: the index alone could lie.
-        let (next, _, is_overrun) = run(&mut source, 30)[0];
-        assert!(is_overrun && next > index + pairs as u64, "{late_ticks} ticks");
+        let (next, _, gap) = run(&mut source, 30)[0];
+        assert!(gap == Some(GapCause::Overrun) && next > index + pairs as u64, "{late_ticks} ticks");
         assert_eq!(source.counts().overruns, 1);
-        assert!(!run(&mut source, 30)[0].2, "said once");
+        assert_eq!(run(&mut source, 30)[0].2, None, "said once");
     }
 }
 
@@ -189,7 +189,7 @@ fn a_reading_lost_by_the_converter_is_an_overrun_and_never_a_swap() {
     run(&mut source, 50);
     source.converter_mut().vanishing = 1;
     let deliveries = run(&mut source, 100);
-    assert_eq!(deliveries.iter().filter(|delivery| delivery.2).count(), 1);
+    assert_eq!(deliveries.iter().filter(|delivery| delivery.2 == Some(GapCause::Overrun)).count(), 1);
     assert_eq!((source.counts().overruns, source.converter.restarts), (1, 2));
 }
 
@@ -200,7 +200,9 @@ fn a_slip_nobody_reported_is_caught_by_the_marker_before_a_swapped_pair_gets_out
         run(&mut source, 50);
         source.converter_mut().is_honest = false;
         source.converter_mut().vanishing = vanishing;
-        run(&mut source, 100); // every pair is held against the truth
+        let deliveries = run(&mut source, 100); // every pair is held against the truth
+        let gaps: Vec<_> = deliveries.iter().filter_map(|delivery| delivery.2).collect();
+        assert_eq!(gaps, [GapCause::Resynchronised], "{vanishing}");
         assert_eq!((source.counts().wrong_markers, source.converter.restarts), (1, 2), "{vanishing}");
     }
 }
@@ -212,10 +214,10 @@ fn a_void_conversion_costs_its_own_pair_only() {
     let deliveries = run(&mut source, 1000);
     let mut expected = deliveries[0].0;
     let mut missing = Vec::new();
-    for (index, pairs, is_overrun) in deliveries {
+    for (index, pairs, gap) in deliveries {
         missing.extend(expected..index);
         expected = index + pairs as u64;
-        assert!(!is_overrun);
+        assert_eq!(gap, None);
     }
     assert_eq!(missing, [500]);
     assert_eq!((source.counts().bad_conversions, source.converter.restarts), (1, 1));
@@ -263,7 +265,7 @@ fn a_converter_that_stands_still_is_reported_and_feeds_no_watchdog() {
     assert_eq!(error, Some(CircularError::NotSampling));
     assert!(source.progress() - before <= WANTED as u64);
     source.converter_mut().is_stalled = false;
-    assert!(run(&mut source, 50)[0].2, "and the gap is told");
+    assert_eq!(run(&mut source, 50)[0].2, Some(GapCause::Overrun), "and the gap is told");
 }
 
 proptest! {

@@ -25,9 +25,9 @@ fn codes(scenario: &Scenario, seed: u64, pairs: u64, mut chunk: impl FnMut() -> 
         let size = chunk();
         let (mut a, mut b) = (vec![-1; size], vec![-1; size]);
         match source.take(&mut a, &mut b).unwrap() {
-            Taken::Pairs { first_sample, pairs, is_overrun } => {
+            Taken::Pairs { first_sample, pairs, gap } => {
                 assert_eq!(first_sample as usize, legs[0].len());
-                assert!(!is_overrun && pairs <= size);
+                assert!(gap.is_none() && pairs <= size);
                 legs[0].extend_from_slice(&a[..pairs]);
                 legs[1].extend_from_slice(&b[..pairs]);
             }
@@ -121,13 +121,10 @@ fn source_ends_at_its_length_and_says_so_again() {
     let mut source = LineSource::new(&scenario, 1, Length::Minutes(0.01)).unwrap();
     assert_eq!(source.length_pairs(), Some(120_000));
     let (mut a, mut b) = (vec![0; 119_000], vec![0; 130_000]);
+    assert_eq!(source.take(&mut a, &mut b), Ok(Taken::Pairs { first_sample: 0, pairs: 119_000, gap: None }));
     assert_eq!(
         source.take(&mut a, &mut b),
-        Ok(Taken::Pairs { first_sample: 0, pairs: 119_000, is_overrun: false })
-    );
-    assert_eq!(
-        source.take(&mut a, &mut b),
-        Ok(Taken::Pairs { first_sample: 119_000, pairs: 1000, is_overrun: false })
+        Ok(Taken::Pairs { first_sample: 119_000, pairs: 1000, gap: None })
     );
     assert_eq!(source.take(&mut a, &mut b), Ok(Taken::Finished));
     assert_eq!(source.take(&mut a, &mut b), Ok(Taken::Finished));

@@ -16,7 +16,7 @@ fn integer_samples_are_the_codes_and_scale_to_full_scale() {
         let (mut a, mut b) = ([7; 4], [7; 4]);
         assert_eq!(
             recording.take(&mut a, &mut b).unwrap(),
-            Taken::Pairs { first_sample: 0, pairs: 4, is_overrun: false }
+            Taken::Pairs { first_sample: 0, pairs: 4, gap: None }
         );
         let interleaved: Vec<i32> = a.into_iter().zip(b).flat_map(|(a, b)| [a, b]).collect();
         assert_eq!(interleaved, samples, "{bits} bits");

@@ -15,7 +15,7 @@ use legwise_firmware::fft::{Complex, POINTS, transform};
 use legwise_firmware::levels::LevelMeter;
 use legwise_firmware::limit_check::{LimitCheck, LimitConfig, LimitEvent};
 use legwise_firmware::outbox::Outbox;
-use legwise_firmware::pipeline::Pipeline;
+use legwise_firmware::pipeline::{Buffers, Pipeline};
 use legwise_firmware::settings;
 use legwise_firmware::snippet_ring::SnippetRing;
 use legwise_firmware::source::SourceDescription;
@@ -111,7 +111,8 @@ fn count(signal: Signal, skew_ns: i32, stage: &mut dyn FnMut(&Block<'_>)) -> u32
 }
 
 fn each_block(signal: Signal, skew_ns: i32, deal: &mut dyn FnMut(&Block<'_>)) {
-    let mut staging = Staging::new(&description(skew_ns));
+    let mut staging = Staging::new();
+    staging.begin(&description(skew_ns));
     let mut signals = Signals::new(signal);
     let (mut code_a, mut code_b) = ([0; BLOCK_PAIRS], [0; BLOCK_PAIRS]);
     let mut blocks = 0;
@@ -132,7 +133,8 @@ fn each_block(signal: Signal, skew_ns: i32, deal: &mut dyn FnMut(&Block<'_>)) {
 }
 
 fn count_staging(skew_ns: i32) -> u32 {
-    let mut staging = Staging::new(&description(skew_ns));
+    let mut staging = Staging::new();
+    staging.begin(&description(skew_ns));
     let mut signals = Signals::new(Signal::Quiet);
     let (mut code_a, mut code_b) = ([0; BLOCK_PAIRS], [0; BLOCK_PAIRS]);
     let mut total = 0;
@@ -165,7 +167,8 @@ fn count_check(signal: Signal, settings: &Settings) -> u32 {
 }
 
 fn count_pipeline(signal: Signal, settings: Settings, outbox: &mut Outbox<6144, 5120>) -> u32 {
-    let mut pipeline = Pipeline::new(description(0), settings);
+    let mut buffers = Buffers::new();
+    let mut pipeline = Pipeline::new(&mut buffers, description(0), settings);
     let mut signals = Signals::new(signal);
     let (mut code_a, mut code_b) = ([0; BLOCK_PAIRS], [0; BLOCK_PAIRS]);
     let mut frame = [0; DEVICE_FRAME_BYTES];
@@ -222,7 +225,7 @@ fn main() -> ! {
     is_kept &= line("spectra, one segment in eight", cost, PAIRS, 35);
     is_kept &= line("  one transform, per point", count_transform(), POINTS as u32, 90);
 
-    let mut outbox = Outbox::new(1);
+    let mut outbox = Outbox::new();
     let cost = count_pipeline(Signal::Quiet, settings, &mut outbox);
     is_kept &= line("everything, quiet, every segment", cost, PAIRS, 375);
     settings.reporting.spectrum_skip = 7;

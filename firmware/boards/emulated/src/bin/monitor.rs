@@ -9,15 +9,20 @@ use legwise_board_emulated::replay::Replay;
 use legwise_board_emulated::stack::high_water;
 use legwise_board_emulated::uart::Uart;
 use legwise_firmware::alarm::{AlarmPin, NoPin};
-use legwise_firmware::monitor::{Identity, Monitor, Step};
+use legwise_firmware::monitor::{Identity, Memory, Monitor, Step};
+use legwise_firmware::pipeline::Buffers;
 use legwise_firmware::settings;
 use legwise_protocol::message::ResetCause;
 use legwise_protocol::receivers::TABLE;
+use static_cell::ConstStaticCell;
 
 const KEPT_BYTES: usize = 6 * 1024;
 const PASSING_BYTES: usize = 5 * 1024;
 /// Kept messages one block can make, at most, with room to spare: below this the replay waits.
 const KEPT_ROOM_BYTES: usize = 3 * 1024;
+
+static BUFFERS: ConstStaticCell<Buffers> = ConstStaticCell::new(Buffers::new());
+static MEMORY: ConstStaticCell<Memory<KEPT_BYTES, PASSING_BYTES>> = ConstStaticCell::new(Memory::new());
 
 #[entry]
 fn main() -> ! {
@@ -34,8 +39,11 @@ fn main() -> ! {
     let Ok(alarm) = AlarmPin::new(NoPin, 0);
     let rate = legwise_firmware::source::PairSource::describe(&replay).sample_rate_mhz;
     let settings = settings::for_receiver(receiver, rate);
-    let mut monitor =
-        Monitor::<_, _, _, KEPT_BYTES, PASSING_BYTES>::new(identity, replay, Uart::new(), alarm, settings);
+    let (Some(buffers), Some(memory)) = (BUFFERS.try_take(), MEMORY.try_take()) else {
+        end(debug::EXIT_FAILURE)
+    };
+    let hardware = (replay, Uart::new(), alarm);
+    let mut monitor = Monitor::new(identity, settings, hardware, (buffers, memory));
     loop {
         // A recording can wait for the link; a converter could not. Nothing is shed here.
         let has_room = monitor.outbox().kept_room() >= KEPT_ROOM_BYTES && monitor.outbox().is_sent();
