@@ -3,8 +3,12 @@
 //! * Segments of 1024 pairs, 50 % overlap, mean removed, periodic Hann window: Welch, IEEE Trans.
 //!   AU-15, 1967; window figures in Harris, Proc. IEEE 66(1), 1978.
 //! * One transform for the pair (two real signals in one complex transform, a textbook identity):
-//!   `z = CM + j DM`, then with `P = Z[k]` and `Q = conj Z[N−k]`: `|CM|² = |P+Q|²/4`, `|DM|² = |P−Q|²/4`.
+//!   `z = 2CM + j DM`, then with `P = Z[k]` and `Q = conj Z[N−k]`: `|2CM|² = |P+Q|²/4`, `|DM|² = |P−Q|²/4`.
 //! * Result: one-sided power spectral density in V²/Hz, `2|X|²/(fs Σw²)`, 1× at 0 Hz and at fs/2.
+//!
+//! The transform's first pass windows what it fetches, its last adds up the powers: neither has a loop
+//! of its own. The window is twice Hann's, `1 − cos 2πn/N`, from the transform's factors, and voltages
+//! stay in microvolts; the scale of the result takes care of both.
 //!
 //! The transform in `f32` leaks about 6e-8 of the differential mode's r.m.s. value per sample into the
 //! common mode (and the other way): far below any converter.
@@ -12,39 +16,95 @@
 //! Segments may be skipped to save time; the message then says how many. The ladder of lower rates
 //! is another user of this accumulator: it holds one rung and knows its rate only when publishing.
 
+use core::f32::consts::FRAC_1_SQRT_2;
+
 use crate::block::Block;
-use crate::fft::{Complex, Complexes, POINTS, transform};
+use crate::fft::{BINS, COLUMNS, Complex, Complexes, POINTS, place, sine_cosine, transform};
 use legwise_protocol::bytes::Bytes;
 use legwise_protocol::message::{Message, Mode, PAYLOAD_BYTES, SpectrumPart};
 use legwise_protocol::power;
 
 const HALF: usize = POINTS / 2;
-/// Bins from 0 Hz to half the rate.
-pub const BINS: usize = HALF + 1;
-/// Σw² of the periodic Hann window: 3N/8.
-const WINDOW_POWER: f32 = 3.0 * POINTS as f32 / 8.0;
+const ROWS: usize = HALF / COLUMNS;
+/// Σw² of the window `1 − cos 2πn/N`: 3N/2.
+const WINDOW_POWER: f32 = 1.5 * POINTS as f32;
 /// Bins one message carries.
 const BINS_PER_PART: usize = PAYLOAD_BYTES / 2;
 
-/// First half of the periodic Hann window in volts per microvolt, `(1 − cos 2πn/N)/2 · 1e-6`; the other
-/// half mirrors it.
-static WINDOW: [f32; BINS] = {
-    let mut window = [0.0; BINS];
-    let mut n = 0;
-    while n < BINS {
-        window[n] = ((0.5 - 0.5 * crate::trigonometry::sine_cosine_of_turn(n, POINTS).1) * 1e-6) as f32;
-        n += 1;
+/// Half a segment, column by column as the transform fetches it.
+#[derive(Debug)]
+struct Half {
+    /// VA+VB and VA−VB, microvolts: sample n + N row/8 in column n. Exact below 2^24, that is 16.7 V;
+    /// beyond, rounding is far below any converter's step.
+    columns: [[Complex; ROWS]; COLUMNS],
+    twice_cm_sum: i64,
+    dm_sum: i64,
+}
+
+impl Half {
+    const EMPTY: Self = Self { columns: [[Complex::ZERO; ROWS]; COLUMNS], twice_cm_sum: 0, dm_sum: 0 };
+
+    /// Takes samples from `start` on, up to the end of the row at most; how many.
+    fn fill(&mut self, start: usize, twice_cm: &[i32], dm: &[i32]) -> usize {
+        if start == 0 {
+            (self.twice_cm_sum, self.dm_sum) = (0, 0);
+        }
+        let (row, n) = (start / COLUMNS % ROWS, start % COLUMNS);
+        let columns = self.columns.get_mut(n..).unwrap_or_default();
+        let (mut twice_cm_sum, mut dm_sum) = (0, 0);
+        for ((column, &twice_cm), &dm) in columns.iter_mut().zip(twice_cm).zip(dm) {
+            twice_cm_sum += i64::from(twice_cm);
+            dm_sum += i64::from(dm);
+            column[row] = Complex { re: twice_cm as f32, im: dm as f32 };
+        }
+        self.twice_cm_sum += twice_cm_sum;
+        self.dm_sum += dm_sum;
+        columns.len().min(twice_cm.len()).min(dm.len())
     }
-    window
-};
+}
+
+/// Sum and difference of two samples half a segment apart, less the mean, times the window:
+/// `(1 − c) a ± (1 + c) b = s − c d, d − c s` with c the cosine at the older, s and d the sum and the
+/// difference without window.
+#[inline(always)]
+fn windowed(older: Complex, newer: Complex, twice_mean: Complex, cosine: f32) -> (Complex, Complex) {
+    let (sum, difference) = older.sum_and_difference(newer);
+    let sum = Complex { re: sum.re - twice_mean.re, im: sum.im - twice_mean.im };
+    (
+        Complex { re: sum.re - cosine * difference.re, im: sum.im - cosine * difference.im },
+        Complex { re: difference.re - cosine * sum.re, im: difference.im - cosine * sum.im },
+    )
+}
+
+/// Sums over segments of `|P+Q|²` and `|P−Q|²` of a bin.
+#[derive(Clone, Copy, Debug)]
+struct Powers {
+    common: f32,
+    differential: f32,
+}
+
+impl Powers {
+    const ZERO: Self = Self { common: 0.0, differential: 0.0 };
+
+    /// Adds a segment; Q is the conjugate of `mirror`.
+    #[inline(always)]
+    fn add(&mut self, p: Complex, mirror: Complex) {
+        let (sum_re, sum_im) = (p.re + mirror.re, p.im - mirror.im);
+        let (difference_re, difference_im) = (p.re - mirror.re, p.im + mirror.im);
+        self.common = self.common + sum_re * sum_re + sum_im * sum_im;
+        self.differential = self.differential + difference_re * difference_re + difference_im * difference_im;
+    }
+}
 
 /// Segment under construction, sums, and the transform's working space.
 #[derive(Debug)]
 pub struct SpectrumMeter {
-    /// VA+VB of the segment, microvolts.
-    twice_cm: [i32; POINTS],
-    /// VA−VB of the segment, microvolts.
-    dm: [i32; POINTS],
+    /// The older and the newer half of the segment: the other way round when `is_swapped`.
+    halves: (Half, Half),
+    is_swapped: bool,
+    /// Whether the older half is there.
+    has_older: bool,
+    /// Pairs in the newer half.
     filled: usize,
     /// Pairs still to be passed over before the next segment.
     pass_over: u32,
@@ -52,10 +112,8 @@ pub struct SpectrumMeter {
     end_sample: u64,
     segments: u32,
     skipped: u32,
-    common: [f32; BINS],
-    differential: [f32; BINS],
+    powers: [Powers; BINS],
     work: Complexes,
-    transformed: Complexes,
 }
 
 impl Default for SpectrumMeter {
@@ -65,21 +123,20 @@ impl Default for SpectrumMeter {
 }
 
 impl SpectrumMeter {
-    /// No segment yet.
+    /// Nothing taken yet. All bytes are zero.
     pub const fn new() -> Self {
         Self {
-            twice_cm: [0; POINTS],
-            dm: [0; POINTS],
+            halves: (Half::EMPTY, Half::EMPTY),
+            is_swapped: false,
+            has_older: false,
             filled: 0,
             pass_over: 0,
             first_sample: 0,
             end_sample: 0,
             segments: 0,
             skipped: 0,
-            common: [0.0; BINS],
-            differential: [0.0; BINS],
+            powers: [Powers::ZERO; BINS],
             work: [Complex::ZERO; POINTS],
-            transformed: [Complex::ZERO; POINTS],
         }
     }
 
@@ -100,20 +157,19 @@ impl SpectrumMeter {
         let mut twice_cm = block.twice_cm;
         let mut dm = block.dm;
         let mut sample = block.first_sample;
-        while !dm.is_empty() {
+        while !twice_cm.is_empty() && !dm.is_empty() {
             let over = dm.len().min(self.pass_over as usize);
             self.pass_over -= over as u32;
-            let room = (dm.len() - over).min(POINTS - self.filled);
-            fill(&mut self.twice_cm, self.filled, twice_cm.get(over..over + room));
-            fill(&mut self.dm, self.filled, dm.get(over..over + room));
-            self.filled += room;
-            let used = over + room;
-            sample += used as u64;
-            twice_cm = twice_cm.get(used..).unwrap_or(&[]);
-            dm = dm.get(used..).unwrap_or(&[]);
-            if self.filled == POINTS {
-                self.transform_segment(sample);
-                self.move_on(skip);
+            let newer = if self.is_swapped { &mut self.halves.0 } else { &mut self.halves.1 };
+            let rest = (twice_cm.get(over..).unwrap_or_default(), dm.get(over..).unwrap_or_default());
+            let used = newer.fill(self.filled, rest.0, rest.1);
+            self.filled += used;
+            sample += (over + used) as u64;
+            twice_cm = rest.0.get(used..).unwrap_or_default();
+            dm = rest.1.get(used..).unwrap_or_default();
+            if self.filled == HALF {
+                self.filled = 0;
+                self.take_half(sample, skip);
             }
         }
     }
@@ -121,6 +177,7 @@ impl SpectrumMeter {
     /// Forgets the segment under construction: a gap follows.
     pub fn break_off(&mut self) {
         self.filled = 0;
+        self.has_older = false;
         self.pass_over = 0;
     }
 
@@ -128,10 +185,10 @@ impl SpectrumMeter {
     pub fn finish(&mut self, sample_rate_mhz: u64, records: &mut dyn FnMut(&Message)) {
         if self.segments > 0 {
             let rate = sample_rate_mhz as f32 * 1e-3;
-            // Each sum holds |P±Q|² = 4|X|²; 2/(fs Σw² K) · 1/4.
-            let scale = 0.5 / (rate * WINDOW_POWER * self.segments as f32);
-            self.send(Mode::Common, &self.common, scale, records);
-            self.send(Mode::Differential, &self.differential, scale, records);
+            // Each sum holds |P±Q|² = 4|X|² in µV²; 2/(fs Σw² K) · 1/4 · 1e-12, and CM is there twice.
+            let scale = 0.5e-12 / (rate * WINDOW_POWER * self.segments as f32);
+            self.send(Mode::Common, |powers| powers.common, 0.25 * scale, records);
+            self.send(Mode::Differential, |powers| powers.differential, scale, records);
         }
         self.clear();
     }
@@ -139,19 +196,20 @@ impl SpectrumMeter {
     fn clear(&mut self) {
         self.segments = 0;
         self.skipped = 0;
-        self.common.fill(0.0);
-        self.differential.fill(0.0);
+        self.powers.fill(Powers::ZERO);
     }
 
-    /// Keeps the second half as the first of the next segment, or passes over some.
-    fn move_on(&mut self, skip: u16) {
-        if skip == 0 {
-            self.twice_cm.copy_within(HALF.., 0);
-            self.dm.copy_within(HALF.., 0);
-            self.filled = HALF;
-        } else {
+    /// The newer half is full. It becomes the older, unless segments are passed over.
+    fn take_half(&mut self, end_sample: u64, skip: u16) {
+        let is_segment = self.has_older;
+        if is_segment {
+            self.transform_segment(end_sample);
+        }
+        self.is_swapped = !self.is_swapped;
+        self.has_older = true;
+        if is_segment && skip > 0 {
             // Without overlap half a segment is passed over anyway: skip 1 leaves no hole.
-            self.filled = 0;
+            self.has_older = false;
             self.pass_over = (u32::from(skip) - 1) * HALF as u32;
             self.skipped = self.skipped.saturating_add(u32::from(skip));
         }
@@ -163,39 +221,31 @@ impl SpectrumMeter {
         }
         self.end_sample = end_sample;
         self.segments += 1;
-        self.apply_window();
-        transform(&mut self.work, &mut self.transformed);
-        self.accumulate();
+        let (first, second) = (&self.halves.0, &self.halves.1);
+        let (older, newer) = if self.is_swapped { (second, first) } else { (first, second) };
+        // To a microvolt, far below any converter's step; twice, for two samples at a time.
+        let twice_mean = |sum: i64| 2.0 * (sum >> POINTS.ilog2()) as i32 as f32;
+        let twice_mean = Complex {
+            re: twice_mean(older.twice_cm_sum + newer.twice_cm_sum),
+            im: twice_mean(older.dm_sum + newer.dm_sum),
+        };
+        let column = |n: usize| {
+            let (sine, cosine) = sine_cosine(n);
+            let (difference, sum) = ((cosine - sine) * FRAC_1_SQRT_2, (cosine + sine) * FRAC_1_SQRT_2);
+            // Cosines at n, n + N/8, n + 2N/8, n + 3N/8.
+            let cosines = [cosine, difference, -sine, -sum];
+            let (older, newer) = (&older.columns[n % COLUMNS], &newer.columns[n % COLUMNS]);
+            core::array::from_fn(|row| windowed(older[row], newer[row], twice_mean, cosines[row]))
+        };
+        transform(&mut self.work, column, &mut self.powers, Powers::add);
     }
 
-    /// Volts, mean removed and windowed: common mode into `re`, differential mode into `im`.
-    fn apply_window(&mut self) {
-        let (cm_mean, dm_mean) = (mean(&self.twice_cm), mean(&self.dm));
-        let (twice_cm, dm) = (self.twice_cm.split_at(HALF), self.dm.split_at(HALF));
-        let (rise, fall) = self.work.split_at_mut(HALF);
-        windowed(rise, (twice_cm.0, cm_mean), (dm.0, dm_mean), WINDOW.iter());
-        windowed(fall, (twice_cm.1, cm_mean), (dm.1, dm_mean), WINDOW.iter().rev());
-    }
-
-    /// Adds |P+Q|² and |P−Q|² of every bin.
-    fn accumulate(&mut self) {
-        let [zero, rest @ ..] = &self.transformed;
-        let [common_zero, common @ ..] = &mut self.common;
-        let [differential_zero, differential @ ..] = &mut self.differential;
-        // Bin 0 is its own mirror; bins 1.. mirror N-1 downwards.
-        add_powers(*zero, *zero, common_zero, differential_zero);
-        let sums = common.iter_mut().zip(differential);
-        for ((p, q), (common, differential)) in rest.iter().zip(rest.iter().rev()).zip(sums) {
-            add_powers(*p, *q, common, differential);
-        }
-    }
-
-    fn send(&self, mode: Mode, sums: &[f32; BINS], scale: f32, records: &mut dyn FnMut(&Message)) {
-        for (number, bins) in sums.chunks(BINS_PER_PART).enumerate() {
-            let first_bin = number * BINS_PER_PART;
+    fn send(&self, mode: Mode, sum: impl Fn(&Powers) -> f32, scale: f32, records: &mut dyn FnMut(&Message)) {
+        for first_bin in (0..BINS).step_by(BINS_PER_PART) {
             let mut codes = Bytes::new();
-            for (bin, &sum) in (first_bin..).zip(bins) {
+            for bin in (first_bin..BINS).take(BINS_PER_PART) {
                 let is_single = bin == 0 || bin == HALF;
+                let sum = self.powers.get(place(bin)).map_or(0.0, &sum);
                 let density = sum * scale * if is_single { 0.5 } else { 1.0 };
                 codes.extend(&power::encode(density).to_le_bytes());
             }
@@ -214,39 +264,76 @@ impl SpectrumMeter {
     }
 }
 
-/// |P+Q|² and |P−Q|², where Q is the conjugate of `mirror`.
-#[inline(always)]
-fn add_powers(p: Complex, mirror: Complex, common: &mut f32, differential: &mut f32) {
-    let (sum_re, sum_im) = (p.re + mirror.re, p.im - mirror.im);
-    let (difference_re, difference_im) = (p.re - mirror.re, p.im + mirror.im);
-    *common += sum_re * sum_re + sum_im * sum_im;
-    *differential += difference_re * difference_re + difference_im * difference_im;
-}
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::block::Spans;
+    use legwise_protocol::units::Span;
+    use std::vec::Vec;
 
-/// Half a segment: values less their mean, times the window.
-#[inline(always)]
-fn windowed<'a>(
-    out: &mut [Complex],
-    (twice_cm, cm_mean): (&[i32], i32),
-    (dm, dm_mean): (&[i32], i32),
-    window: impl Iterator<Item = &'a f32>,
-) {
-    for ((out, (&twice_cm, &dm)), &window) in out.iter_mut().zip(twice_cm.iter().zip(dm)).zip(window) {
-        out.re = twice_cm.saturating_sub(cm_mean) as f32 * (window * 0.5);
-        out.im = dm.saturating_sub(dm_mean) as f32 * window;
+    fn take(meter: &mut SpectrumMeter, first_sample: u64, samples: &[(i32, i32)], skip: u16) {
+        let (twice_cm, dm): (Vec<i32>, Vec<i32>) = samples.iter().copied().unzip();
+        let span = Span::EMPTY;
+        meter.take(
+            &Block {
+                first_sample,
+                code_a: &[],
+                code_b: &[],
+                leg_a: &[],
+                leg_b: &[],
+                twice_cm: &twice_cm,
+                dm: &dm,
+                dm_before: 0,
+                dm_after: 0,
+                clipped: 0,
+                spans: Spans { leg_a: span, leg_b: span, twice_cm: span, dm: span },
+            },
+            skip,
+        );
     }
-}
 
-/// Copies values to `slots` from `start` on.
-fn fill(slots: &mut [i32; POINTS], start: usize, values: Option<&[i32]>) {
-    let slots = slots.get_mut(start..).unwrap_or(&mut []);
-    for (slot, &value) in slots.iter_mut().zip(values.unwrap_or(&[])) {
-        *slot = value;
+    fn finished(meter: &mut SpectrumMeter) -> Vec<SpectrumPart> {
+        let mut parts = Vec::new();
+        meter.finish(500_000_000, &mut |message| {
+            if let Message::Spectrum(part) = message {
+                parts.push(*part);
+            }
+        });
+        parts
     }
-}
 
-/// Mean, rounded toward negative infinity: exact to a microvolt, far below any converter's step.
-fn mean(values: &[i32; POINTS]) -> i32 {
-    let sum: i64 = values.iter().map(|&value| i64::from(value)).sum();
-    (sum >> POINTS.ilog2()) as i32
+    #[test]
+    fn a_stream_gives_what_its_segments_give_one_by_one() {
+        // Multiplicative congruential (Lewis, Goodman and Miller 1969), ±1 V.
+        let mut seed = 7_u64;
+        let mut noise = || {
+            seed = seed * 16_807 % 2_147_483_647;
+            (seed / 1074) as i32 - 1_000_000
+        };
+        let samples: Vec<_> = (0..20_000).map(|_| (2_000_000 + noise(), noise())).collect();
+        for (skip, hop) in [(0, 512), (1, 1024), (2, 1536), (7, 4096)] {
+            for block in [1, 100, 256, 5000] {
+                let mut meter = SpectrumMeter::new();
+                for (number, samples) in samples.chunks(block).enumerate() {
+                    take(&mut meter, (number * block) as u64, samples, skip);
+                }
+                let mut single = SpectrumMeter::new();
+                let mut first_sample = 0;
+                while first_sample + POINTS <= samples.len() {
+                    let segment = &samples[first_sample..first_sample + POINTS];
+                    take(&mut single, first_sample as u64, segment, 0);
+                    single.break_off();
+                    first_sample += hop;
+                }
+                let (parts, singles) = (finished(&mut meter), finished(&mut single));
+                assert!(parts.len() > 2, "{}", parts.len());
+                for (part, single) in parts.iter().zip(&singles) {
+                    assert_eq!(part.codes, single.codes, "skip {skip}, blocks of {block}");
+                    assert_eq!((part.first_sample, part.segments), (0, single.segments));
+                    assert_eq!(part.span_samples, single.span_samples);
+                    assert_eq!(part.skipped, part.segments * u32::from(skip));
+                }
+            }
+        }
+    }
 }
