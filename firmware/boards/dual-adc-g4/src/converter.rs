@@ -2,7 +2,7 @@
 //!
 //! ```text
 //!  TIM6 update ─► ADC1: leg A (buffer 1), marker A ─┐ 32-bit word   DMA1 ch 1   ring of 4096 words
-//!  500 kHz        ADC2: leg B (buffer 2), marker B ─┴─ CDR ─────────circular──► = 2048 scans, 4.1 ms
+//!  250 kHz        ADC2: leg B (buffer 2), marker B ─┴─ CDR ─────────circular──► = 2048 scans, 8.2 ms
 //!  TIM5 counts the same ticks: the clock of the sample index
 //! ```
 //! Registers: reference manual RM0440, from memory and from the register crate; not verified on a chip.
@@ -17,8 +17,9 @@ use stm32g4xx_hal::rcc::Rcc;
 
 /// Core and timer clock.
 pub const CORE_HZ: u32 = 170_000_000;
-/// Ticks of the timer clock per pair: 500 000 pairs per second.
-const TICKS_PER_PAIR: u32 = 340;
+/// Ticks of the timer clock per pair: 250 000 pairs per second. The converters would do twice that, the
+/// core would not: README.md, "How fast".
+const TICKS_PER_PAIR: u32 = 680;
 /// Pairs per second, in millihertz.
 pub const SAMPLE_RATE_MHZ: u64 = CORE_HZ as u64 * 1_000 / TICKS_PER_PAIR as u64;
 
@@ -34,7 +35,7 @@ const LEG_B_CHANNEL: u8 = 16; // operational amplifier 2, inside
 const MARKER_A_CHANNEL: u8 = 6; // PC0
 const MARKER_B_CHANNEL: u8 = 7; // PC1
 
-// Converter clock: core / 4 = 42.5 MHz. Leg 47.5 + 12.5, marker 6.5 + 12.5 clocks: 79 of the 85 per pair.
+// Converter clock: core / 4 = 42.5 MHz. Leg 47.5 + 12.5, marker 6.5 + 12.5 clocks: 79 of the 170 per pair.
 const _: () = assert!(4 * (47 + 12 + 6 + 12 + 2) < TICKS_PER_PAIR);
 const _: () = assert!(CORE_HZ % TICKS_PER_PAIR == 0 && RING_WORDS < 65_536);
 
@@ -103,8 +104,8 @@ impl DualConverter {
     }
 
     fn start_converters(&self) {
-        // Clock first: calibration runs on it.
-        self.common.ccr().modify(|_, w| w.ckmode().sync_div4());
+        // Clock and mode first: both can only be written while the converters are off.
+        self.common.ccr().modify(|_, w| w.ckmode().sync_div4().dual().dual_r().dmacfg().set_bit());
         power_up(&self.adc1);
         power_up(&self.adc2);
         set_sequence(&self.adc1, LEG_A_CHANNEL, MARKER_A_CHANNEL);
@@ -112,13 +113,9 @@ impl DualConverter {
         // An overrun keeps the old reading and stops the requests: lost words cannot pass unseen.
         self.adc1.cfgr().modify(|_, w| w.exten().rising_edge().extsel().tim6_trgo().ovrmod().preserve());
         self.adc2.cfgr().modify(|_, w| w.ovrmod().preserve());
-        // SAFETY: 0b00110 and 0b10 are documented values; this value owns the converters, both stopped.
-        self.common
-            .ccr()
-            .modify(|_, w| unsafe { w.dual().bits(0b00110).dmacfg().set_bit().mdma().bits(0b10) });
     }
 
-    /// The trigger every 340 ticks, and a counter that counts once per 340 ticks of the same clock.
+    /// The trigger once per pair, and a counter that counts as often, from the same clock.
     fn start_timers(&self) {
         let (trigger, clock) = (&self.trigger, &self.clock);
         // SAFETY: any 16-bit period and prescaler, any 32-bit period is valid; this value owns the timers.
@@ -242,7 +239,7 @@ impl CircularConverter for RunningConverter {
 
     fn restart(&mut self) -> u64 {
         self.stop();
-        // Right after a tick there are almost 2 µs until the next trigger: it is the first for certain.
+        // Right after a tick there are almost 4 µs until the next trigger: it is the first for certain.
         let before = self.elapsed_scans();
         let mut now = before;
         wait_until(|| {

@@ -13,7 +13,6 @@
 use core::sync::atomic::{AtomicU16, Ordering, fence};
 use legwise_firmware::sampling::circular::CircularConverter;
 use rp235x_hal::pac;
-use rp235x_hal::timer::{CopyableTimer0, Timer};
 
 /// One conversion: 96 clocks of 48 MHz.
 pub const CONVERSION_NS: i32 = 2_000;
@@ -47,20 +46,39 @@ const PATIENCE: u32 = 30_000;
 pub struct AlternatingConverter {
     adc: pac::ADC,
     dma: pac::DMA,
-    clock: Timer<CopyableTimer0>,
+    clock: pac::TIMER0,
 }
 
 impl AlternatingConverter {
-    /// Takes a converter that is switched on and two pins that are analogue inputs. Sampling begins with
-    /// the first [`CircularConverter::restart`].
-    pub fn new(adc: pac::ADC, dma: pac::DMA, clock: Timer<CopyableTimer0>, resets: &mut pac::RESETS) -> Self {
-        resets.reset().modify(|_, w| w.dma().clear_bit());
-        wait_until(|| resets.reset_done().read().dma().bit_is_set());
+    /// Takes a converter that is switched on, while the pins of both legs are analogue inputs and timers
+    /// tick in microseconds. Sampling begins with the first [`CircularConverter::restart`].
+    pub fn new(adc: pac::ADC, dma: pac::DMA, clock: pac::TIMER0, resets: &mut pac::RESETS) -> Self {
+        resets.reset().modify(|_, w| w.dma().clear_bit().timer0().clear_bit());
+        wait_until(|| {
+            let done = resets.reset_done().read();
+            done.dma().bit_is_set() && done.timer0().bit_is_set()
+        });
+        // The converter does not stop at a breakpoint; nor may the clock that numbers what it reads.
+        clock.dbgpause().write(|w| w.dbg0().clear_bit().dbg1().clear_bit());
         adc.cs().modify(|_, w| w.ts_en().bit(cfg!(feature = "marker")));
         // Zero: the next conversion begins when the last one ends.
         // SAFETY: any divider is valid; this value owns the converter.
         adc.div().write(|w| unsafe { w.int().bits(0).frac().bits(0) });
         Self { adc, dma, clock }
+    }
+
+    /// Sampling instants since power-on.
+    fn instant(&self) -> u64 {
+        let mut high = self.clock.timerawh().read().bits();
+        loop {
+            let low = self.clock.timerawl().read().bits();
+            // The upper half moves once in 71 minutes; if it did just now, `low` may belong to either.
+            let high_after = self.clock.timerawh().read().bits();
+            if high == high_after {
+                return (u64::from(high) << 32 | u64::from(low)) / SCAN_US;
+            }
+            high = high_after;
+        }
     }
 
     fn stop(&self) {
@@ -140,7 +158,7 @@ impl CircularConverter for AlternatingConverter {
     }
 
     fn elapsed_scans(&mut self) -> u64 {
-        self.clock.get_counter().ticks() / SCAN_US
+        self.instant()
     }
 
     fn has_failed(&mut self) -> bool {
@@ -154,10 +172,10 @@ impl CircularConverter for AlternatingConverter {
         self.stop();
         self.start_dma();
         // Scans begin on the clock's own grid, so that restarts do not wander.
-        let before = self.elapsed_scans();
+        let before = self.instant();
         let mut now = before;
         wait_until(|| {
-            now = self.clock.get_counter().ticks() / SCAN_US;
+            now = self.instant();
             now != before
         });
         self.start_conversions();

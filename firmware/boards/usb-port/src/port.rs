@@ -80,3 +80,6 @@ pub fn hexadecimal(number: u64, digits: &mut [u8; 16]) -> &str {
     }
     core::str::from_utf8(digits).unwrap_or("0")
 }
+
+#[cfg(test)]
+mod tests;
