@@ -1,10 +1,14 @@
-//! Hardware that is not there: a scripted source and a link in memory, for tests and examples.
+//! Hardware that is not there: a scripted source, a link in memory and a slow one, for tests and examples.
+
+mod throttled;
 
 use crate::link::Link;
 use crate::source::{PairSource, SourceDescription, Taken};
 use core::convert::Infallible;
 use heapless::Deque;
 use legwise_protocol::message::{GapCause, LegScale};
+
+pub use throttled::ThrottledLink;
 
 /// A scale of exactly one microvolt per code, with rails out of reach.
 pub const MICROVOLT_CODES: LegScale = LegScale {
