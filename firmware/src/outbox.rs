@@ -3,7 +3,8 @@
 //! ```text
 //!   record --> kept queue     [ sent, not acknowledged | not yet sent ]  forgotten when acknowledged
 //!          \-> passing queue  [ not yet sent ]                           forgotten when sent or shed
-//!                     both leave in the order they were made
+//!                     both leave in the order they were made,
+//!                     but kept ones first while many of them wait
 //! ```
 //!
 //! When the passing queue is full its oldest messages are shed, and each uses up a sequence number so
@@ -253,9 +254,12 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
     /// `out` must hold [`framing::DEVICE_FRAME_BYTES`].
     pub fn next_frame(&mut self, out: &mut [u8]) -> usize {
         let mut buffer = [0; MESSAGE_BYTES];
+        let is_pressed = self.kept.used - self.kept_sent_bytes > Self::RESERVE;
         let waiting = (self.kept.entry(self.kept_sent_bytes), self.passing.entry(0));
         let (entry, delivery, message) = match waiting {
-            (Some(kept), passing) if passing.is_none_or(|passing| is_before(kept.order, passing.order)) => {
+            (Some(kept), passing)
+                if is_pressed || passing.is_none_or(|passing| is_before(kept.order, passing.order)) =>
+            {
                 self.kept_sent += 1;
                 let number = self.kept_acknowledged.wrapping_add(self.kept_sent);
                 self.kept_sent_ever = self.kept_sent_ever.max(self.kept_sent);

@@ -6,6 +6,7 @@
 
 pub mod boards;
 pub mod emulator;
+pub mod link_budget;
 pub mod recorder;
 pub mod replay;
 pub mod rule;

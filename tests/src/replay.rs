@@ -3,12 +3,18 @@
 //!
 //! The file's layout is drawn in `firmware/boards/emulated/src/replay.rs`.
 
+use legwise::line::{Length, LineSource, scenarios};
 use legwise_firmware::block::BLOCK_PAIRS;
+use legwise_firmware::settings;
 use legwise_firmware::source::{PairSource, SourceDescription, Taken};
-use legwise_protocol::message::GapCause;
+use legwise_protocol::message::{GapCause, Settings};
+use legwise_protocol::receivers::{self, TABLE};
 use std::convert::Infallible;
 use std::io::{self, Write};
 use std::path::Path;
+
+/// The first disturbance of a scenario sets in within this time.
+const LONGEST_WAIT_S: f64 = 120.0;
 
 /// Consecutive pairs handed out at once.
 #[derive(Clone, Debug)]
@@ -23,6 +29,20 @@ pub struct Delivery {
     pub leg_b: Vec<i32>,
 }
 
+impl Delivery {
+    /// Copies the pairs to the front of both buffers.
+    pub fn hand_out(&self, leg_a: &mut [i32], leg_b: &mut [i32]) -> Taken {
+        let pairs = self.leg_a.len();
+        leg_a[..pairs].copy_from_slice(&self.leg_a);
+        leg_b[..pairs].copy_from_slice(&self.leg_b);
+        Taken::Pairs {
+            first_sample: self.first_sample,
+            pairs,
+            gap: self.is_overrun.then_some(GapCause::Overrun),
+        }
+    }
+}
+
 /// A recording as deliveries.
 #[derive(Clone, Debug)]
 pub struct Replay {
@@ -30,7 +50,7 @@ pub struct Replay {
     pub description: SourceDescription,
     /// Row of the receiver table to judge by.
     pub receiver: u32,
-    /// Boot id of the run.
+    /// Boot id of the run; 0: the board draws one at each start.
     pub boot_id: u32,
     /// The deliveries, in order.
     pub deliveries: Vec<Delivery>,
@@ -61,7 +81,46 @@ impl Replay {
             let is_overrun = gap.is_some() | std::mem::take(&mut was_lost);
             deliveries.push(Delivery { first_sample, is_overrun, leg_a, leg_b });
         }
-        Self { description: source.describe(), receiver, boot_id, deliveries, next: 0 }
+        let description = source.describe();
+        Self { description, receiver, boot_id, deliveries, next: 0 }
+    }
+
+    /// Deliveries made elsewhere, judged by the first receiver of the table.
+    pub const fn of_deliveries(description: SourceDescription, deliveries: Vec<Delivery>) -> Self {
+        Self { description, receiver: 0, boot_id: 1, deliveries, next: 0 }
+    }
+
+    /// `seconds` of a built-in scenario, from `lead_s` before its first disturbance sets in, judged by
+    /// the scenario's receiver. Samples are counted from the first pair of the stretch.
+    ///
+    /// # Errors
+    /// When there is no such scenario.
+    pub fn of_scenario(name: &str, seed: u64, lead_s: f64, seconds: f64) -> Result<Self, String> {
+        let scenario = scenarios::by_name(name).ok_or_else(|| format!("no scenario is called {name}"))?;
+        let receiver = receivers::by_name(&scenario.receiver).map_or(0, |receiver| receiver.id as u32);
+        let source =
+            |pairs| LineSource::new(&scenario, seed, Length::Pairs(pairs)).map_err(|error| error.to_string());
+        let onsets = source(1)?.activity(0.0, LONGEST_WAIT_S).into_iter().map(|one| one.from_s);
+        let first_s = onsets.filter(|&from_s| from_s > 0.0).fold(f64::INFINITY, f64::min);
+        let skipped_s = if first_s.is_finite() { (first_s - lead_s).max(0.0) } else { 0.0 };
+        let blocks = |seconds: f64| (seconds * scenario.sample_rate_hz / BLOCK_PAIRS as f64) as usize;
+        let (skipped, kept) = (blocks(skipped_s), blocks(seconds));
+        let mut source = source(((skipped + kept) * BLOCK_PAIRS) as u64)?;
+        let mut passed_over = [[0; BLOCK_PAIRS]; 2];
+        for _ in 0..skipped {
+            let [leg_a, leg_b] = &mut passed_over;
+            let Ok(_) = source.take(leg_a, leg_b);
+        }
+        let mut replay = Self::record(source, receiver, 1, |_| false);
+        for delivery in &mut replay.deliveries {
+            delivery.first_sample -= (skipped * BLOCK_PAIRS) as u64;
+        }
+        Ok(replay)
+    }
+
+    /// The settings a board starts with on this recording.
+    pub fn settings(&self) -> Settings {
+        settings::for_receiver(&TABLE[self.receiver as usize], self.description.sample_rate_mhz)
     }
 
     /// Pairs in all deliveries.
@@ -69,15 +128,16 @@ impl Replay {
         self.deliveries.iter().map(|delivery| delivery.leg_a.len()).sum()
     }
 
-    /// Writes the file.
+    /// Writes the file for a link of `link_bytes_per_s`, for which the replay will not wait; 0: it will.
     ///
     /// # Errors
     /// When the file cannot be written.
-    pub fn write(&self, path: &Path) -> io::Result<()> {
+    pub fn write(&self, path: &Path, link_bytes_per_s: u32) -> io::Result<()> {
         let mut out = io::BufWriter::new(std::fs::File::create(path)?);
         out.write_all(b"LWREPLAY")?;
         out.write_all(&self.receiver.to_le_bytes())?;
         out.write_all(&self.boot_id.to_le_bytes())?;
+        out.write_all(&link_bytes_per_s.to_le_bytes())?;
         out.write_all(&self.description.sample_rate_mhz.to_le_bytes())?;
         out.write_all(&self.description.skew_ns.to_le_bytes())?;
         for leg in &self.description.legs {
@@ -111,13 +171,6 @@ impl PairSource for Replay {
     fn take(&mut self, leg_a: &mut [i32], leg_b: &mut [i32]) -> Result<Taken, Infallible> {
         let Some(delivery) = self.deliveries.get(self.next) else { return Ok(Taken::Finished) };
         self.next += 1;
-        let pairs = delivery.leg_a.len();
-        leg_a[..pairs].copy_from_slice(&delivery.leg_a);
-        leg_b[..pairs].copy_from_slice(&delivery.leg_b);
-        Ok(Taken::Pairs {
-            first_sample: delivery.first_sample,
-            pairs,
-            gap: delivery.is_overrun.then_some(GapCause::Overrun),
-        })
+        Ok(delivery.hand_out(leg_a, leg_b))
     }
 }

@@ -3,7 +3,8 @@
 //! The file (all little-endian), written by the `replay` module of the tests crate:
 //!
 //! ```text
-//!  header   "LWREPLAY"  receiver u32  boot_id u32  rate_mhz u64  skew_ns i32
+//!  header   "LWREPLAY"  receiver u32  boot_id u32 (0: drawn at each start)
+//!           link_bytes_per_s u32 (0: the replay waits for the link)  rate_mhz u64  skew_ns i32
 //!           then twice (leg A, leg B): mantissa i32, shift u32, offset_uv i32, rail_low i32,
 //!           rail_high i32, gain_ppm u32, offset_uncertainty_uv u32
 //!  then deliveries until the end of the file:
@@ -20,7 +21,7 @@ use legwise_protocol::message::{GapCause, LegScale};
 
 const MAGIC: &[u8; 8] = b"LWREPLAY";
 const LEG_BYTES: usize = 28;
-const HEADER_BYTES: usize = 28 + 2 * LEG_BYTES;
+const HEADER_BYTES: usize = 32 + 2 * LEG_BYTES;
 const DELIVERY_BYTES: usize = 16;
 
 /// What kept a recording from being played.
@@ -43,6 +44,10 @@ struct HostFile {
 impl HostFile {
     /// Opens the file named by the second word of the emulator's command line.
     fn open_argument() -> Option<Self> {
+        let first_handle = [1_usize];
+        // The emulator keeps files open over a reset and gives out the lowest number that is free.
+        // SAFETY: SYS_CLOSE reads one word; this program has opened no file yet.
+        unsafe { syscall1(nr::CLOSE, first_handle.as_ptr() as usize) };
         let mut line = [0_u8; 256];
         let mut arguments = [line.as_mut_ptr() as usize, line.len() - 1];
         // SAFETY: SYS_GET_CMDLINE writes at most the length given into `line`, which outlives the call.
@@ -72,8 +77,18 @@ impl HostFile {
 pub struct ReplayHeader {
     /// Number of the receiver to judge by.
     pub receiver: u32,
-    /// Boot id to use, so that runs can be compared byte by byte.
+    /// Boot id to use, so that runs can be compared byte by byte; 0: draw one.
     pub boot_id: u32,
+    /// Speed of the link, which the replay does not wait for; 0: as fast as it goes, and it waits.
+    pub link_bytes_per_s: u32,
+}
+
+/// A boot id that another start will not have: nanoseconds since the emulator started, never 0.
+pub fn draw_boot_id() -> u32 {
+    let mut elapsed_ns = [0_u32; 2];
+    // SAFETY: SYS_ELAPSED writes two words, which outlive the call.
+    unsafe { syscall1(nr::ELAPSED, elapsed_ns.as_mut_ptr() as usize) };
+    elapsed_ns[0] | 1
 }
 
 /// The recording as a source of pairs. It waits while `may_take` is false.
@@ -102,7 +117,8 @@ impl<'a> Replay<'a> {
         if fields.take::<8>() != *MAGIC {
             return Err(ReplayError::WrongFile);
         }
-        let header = ReplayHeader { receiver: fields.u32(), boot_id: fields.u32() };
+        let (receiver, boot_id, link_bytes_per_s) = (fields.u32(), fields.u32(), fields.u32());
+        let header = ReplayHeader { receiver, boot_id, link_bytes_per_s };
         let sample_rate_mhz = u64::from_le_bytes(fields.take());
         let skew_ns = fields.i32();
         let legs = [fields.leg(), fields.leg()];

@@ -31,6 +31,9 @@ impl Uart {
         unsafe {
             ptr::write_volatile(DIVIDER, 217); // 25 MHz / 115 200
             ptr::write_volatile(CONTROL, 0b11);
+            // What may have been left from before a reset. It also makes the emulator look for input at
+            // once: that the receiver is on it notices only when something else happens, within 1 s.
+            ptr::read_volatile(DATA);
         }
         Self(())
     }

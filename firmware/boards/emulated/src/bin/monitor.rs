@@ -5,10 +5,12 @@
 use core::cell::Cell;
 use cortex_m_rt::entry;
 use cortex_m_semihosting::{debug, nr, syscall1};
-use legwise_board_emulated::replay::Replay;
+use legwise_board_emulated::replay::{Replay, draw_boot_id};
 use legwise_board_emulated::stack::high_water;
 use legwise_board_emulated::uart::Uart;
 use legwise_firmware::alarm::{AlarmPin, NoPin};
+use legwise_firmware::block::BLOCK_PAIRS;
+use legwise_firmware::fakes::ThrottledLink;
 use legwise_firmware::monitor::{Identity, Memory, Monitor, Step};
 use legwise_firmware::pipeline::Buffers;
 use legwise_firmware::settings;
@@ -31,7 +33,7 @@ fn main() -> ! {
     let header = replay.header();
     let Some(receiver) = TABLE.get(header.receiver as usize) else { end(debug::EXIT_FAILURE) };
     let identity = Identity {
-        boot_id: header.boot_id,
+        boot_id: if header.boot_id == 0 { draw_boot_id() } else { header.boot_id },
         board: "emulated M4F",
         serial: 0,
         reset_cause: ResetCause::Software,
@@ -42,14 +44,26 @@ fn main() -> ! {
     let (Some(buffers), Some(memory)) = (BUFFERS.try_take(), MEMORY.try_take()) else {
         end(debug::EXIT_FAILURE)
     };
-    let hardware = (replay, Uart::new(), alarm);
+    let link = ThrottledLink::new(Uart::new(), header.link_bytes_per_s, rate);
+    let hardware = (replay, link, alarm);
     let mut monitor = Monitor::new(identity, settings, hardware, (buffers, memory));
+    let mut after_end = 0;
     loop {
-        // A recording can wait for the link; a converter could not. Nothing is shed here.
-        let has_room = monitor.outbox().kept_room() >= KEPT_ROOM_BYTES && monitor.outbox().is_sent();
-        may_take.set(has_room && monitor.has_obeyed());
+        let now = monitor.next_sample() + after_end;
+        monitor.link_mut().pass_time(now);
+        // A recording can wait for the link; a converter could not. A slow link it waits for only as
+        // long as the host takes to answer, so that acknowledgements come at once in sample time.
+        let is_free = if header.link_bytes_per_s == 0 {
+            monitor.outbox().kept_room() >= KEPT_ROOM_BYTES && monitor.outbox().is_sent()
+        } else {
+            monitor.link_mut().is_answered()
+        };
+        may_take.set(is_free && monitor.has_obeyed());
         match monitor.step() {
-            Ok(Step::Worked | Step::Waiting) => {}
+            Ok(Step::Worked) => {}
+            // Nothing was taken though it might have been: the recording has ended, time goes on.
+            Ok(Step::Waiting) if may_take.get() => after_end += BLOCK_PAIRS as u64,
+            Ok(Step::Waiting) => {}
             Ok(Step::Finished) if monitor.outbox().is_empty() => {
                 tell_stack();
                 end(debug::EXIT_SUCCESS)

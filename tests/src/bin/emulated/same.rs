@@ -1,53 +1,26 @@
-//! Checks the emulated board against the desktop, frame by frame.
-//!
-//! `emulated same IMAGE`: plays recordings through the image in the emulator and through the firmware
-//! on this machine; every frame must be identical, envelope included.
-//! `emulated report IMAGE LEGWISE`: `legwise log` records the image through its port, `legwise report`
-//! judges.
+//! `emulated same IMAGE`: every frame of the image must be that of the firmware on this machine.
 
+use crate::{Outcome, PATIENCE, text};
 use legwise::board::VirtualBoard;
 use legwise::line::{Length, LineSource, scenarios};
 use legwise::port::BoardPort;
-use legwise_firmware::settings;
-use legwise_firmware::source::{PairSource, SourceDescription};
+use legwise_firmware::source::SourceDescription;
 use legwise_protocol::command::Command;
 use legwise_protocol::decoder::DeviceDecoder;
 use legwise_protocol::framing::{Delivery, DeviceFrame};
 use legwise_protocol::message::Message;
-use legwise_protocol::receivers::{self, TABLE};
 use legwise_tests::emulator::Emulator;
+use legwise_tests::link_budget::BOARD_NAME;
 use legwise_tests::replay::Replay;
-use std::path::{Path, PathBuf};
-use std::process::ExitCode;
-use std::time::{Duration, Instant};
+use std::path::Path;
+use std::time::Instant;
 
-/// Longest silence of the board before it counts as hung.
-const PATIENCE: Duration = Duration::from_secs(60);
-const BOARD_NAME: &str = "emulated M4F";
-
-fn main() -> ExitCode {
-    let arguments: Vec<_> = std::env::args().skip(1).collect();
-    let outcome = match arguments.iter().map(String::as_str).collect::<Vec<_>>()[..] {
-        ["same", image] => same(Path::new(image)),
-        ["report", image, legwise] => report(Path::new(image), Path::new(legwise)),
-        _ => {
-            Err("could not read the arguments; try: emulated same IMAGE | emulated report IMAGE LEGWISE"
-                .into())
-        }
-    };
-    match outcome {
-        Ok(()) => ExitCode::SUCCESS,
-        Err(message) => {
-            eprintln!("{message}");
-            ExitCode::FAILURE
-        }
-    }
-}
-
-type Outcome<T> = Result<T, String>;
+/// Pairs of each scenario, and how long before its first disturbance they begin.
+const SCENARIO_PAIRS: f64 = 200_000.0;
+const LEAD_S: f64 = 0.02;
 
 /// Every recording through both; all frames must be equal.
-fn same(image: &Path) -> Outcome<()> {
+pub fn same(image: &Path) -> Outcome<()> {
     let folder = tempfile::tempdir().map_err(text)?;
     println!(
         "{:<34} {:>8} {:>7} {:>6} {:>8} {:>7}",
@@ -56,7 +29,7 @@ fn same(image: &Path) -> Outcome<()> {
     let mut has_failed = false;
     for (name, replay) in recordings() {
         let path = folder.path().join("replay.bin");
-        replay.write(&path).map_err(text)?;
+        replay.write(&path, 0).map_err(text)?;
         let (emulated, console) = run_emulated(image, &path)?;
         let emulated = from_answer(emulated);
         let desktop = from_answer(run_desktop(replay.clone()));
@@ -102,10 +75,10 @@ fn recordings() -> Vec<(String, Replay)> {
     let mut recordings = Vec::new();
     for (number, (name, _)) in scenarios::NAMES.iter().enumerate() {
         let Some(scenario) = scenarios::by_name(name) else { continue };
-        let receiver = receivers::by_name(&scenario.receiver).map_or(0, |receiver| receiver.id as u32);
-        let Ok(source) = LineSource::new(&scenario, 7, Length::Pairs(150_000)) else { continue };
-        recordings
-            .push(((*name).to_owned(), Replay::record(source, receiver, 100 + number as u32, |_| false)));
+        let seconds = SCENARIO_PAIRS / scenario.sample_rate_hz;
+        let Ok(mut replay) = Replay::of_scenario(name, 7, LEAD_S, seconds) else { continue };
+        replay.boot_id = 100 + number as u32;
+        recordings.push(((*name).to_owned(), replay));
     }
     let quiet = |pairs| {
         let scenario = scenarios::by_name("drive-bay").ok_or("no such scenario").map_err(str::to_owned);
@@ -146,9 +119,7 @@ fn storm(replay: &mut Replay) {
 
 /// The firmware on this machine, told the same things in the same order.
 fn run_desktop(replay: Replay) -> Vec<DeviceFrame> {
-    let receiver = &TABLE[replay.receiver as usize];
-    let settings = settings::for_receiver(receiver, replay.describe().sample_rate_mhz);
-    let boot_id = replay.boot_id;
+    let (settings, boot_id) = (replay.settings(), replay.boot_id);
     let mut board = VirtualBoard::new(replay, settings, BOARD_NAME, boot_id);
     board.command(Command::Identify);
     let (mut decoder, mut frames, mut bytes) = (DeviceDecoder::new(), Vec::new(), Vec::new());
@@ -197,33 +168,4 @@ fn highest_kept(frames: &[DeviceFrame]) -> Option<u32> {
         Delivery::Kept { number } => Some(number),
         Delivery::Passing => None,
     })
-}
-
-/// `legwise log` on the emulated board's port, then `legwise report`.
-fn report(image: &Path, legwise: &Path) -> Outcome<()> {
-    let folder = tempfile::tempdir().map_err(text)?;
-    let scenario = scenarios::by_name("press-ground").ok_or("no such scenario")?;
-    let source = LineSource::new(&scenario, 1, Length::Pairs(20 * 200_000)).map_err(text)?;
-    let recording = folder.path().join("replay.bin");
-    Replay::record(source, 0, 1, |_| false).write(&recording).map_err(text)?;
-    let emulator = Emulator::boot(image, &recording)?;
-    let log: PathBuf = folder.path().join("night.lwlog");
-    let run = |arguments: &[&std::ffi::OsStr]| {
-        let status = std::process::Command::new(legwise).args(arguments).status().map_err(text)?;
-        if status.success() { Ok(()) } else { Err(format!("legwise ended with {status}")) }
-    };
-    run(&[
-        "log".as_ref(),
-        "--port".as_ref(),
-        emulator.port.as_ref(),
-        "--point".as_ref(),
-        "emulated board".as_ref(),
-        "-o".as_ref(),
-        log.as_os_str(),
-    ])?;
-    run(&["report".as_ref(), log.as_os_str()])
-}
-
-fn text(error: impl std::fmt::Display) -> String {
-    error.to_string()
 }
