@@ -13,6 +13,8 @@
 //! It is asked twice: before copying, which scans are there ([`RingReader::ready`]), and after, with
 //! the position read afresh, whether the copy was overtaken meanwhile ([`RingReader::is_intact`]).
 
+use core::num::NonZeroU64;
+
 /// Whole scans that can be copied now.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub struct Ready {
@@ -27,8 +29,8 @@ pub struct Ready {
 /// The reading end of a ring.
 #[derive(Clone, Copy, Debug)]
 pub struct RingReader {
-    ring_words: u64,
-    scan_words: u64,
+    ring_words: NonZeroU64,
+    scan_words: NonZeroU64,
     read: u64,
 }
 
@@ -37,9 +39,7 @@ impl RingReader {
     ///
     /// The ring need not be a multiple of the scan: a scan may lie across the seam.
     pub const fn new(ring_words: usize, scan_words: usize) -> Self {
-        let scan_words = if scan_words == 0 { 1 } else { scan_words as u64 };
-        let ring_words = if ring_words == 0 { 1 } else { ring_words as u64 };
-        Self { ring_words, scan_words, read: 0 }
+        Self { ring_words: at_least_one(ring_words), scan_words: at_least_one(scan_words), read: 0 }
     }
 
     /// Back to the start: the writer begins anew.
@@ -48,12 +48,12 @@ impl RingReader {
     }
 
     /// Scans taken or passed over since the start.
-    pub const fn read_scans(&self) -> u64 {
+    pub fn read_scans(&self) -> u64 {
         self.read / self.scan_words
     }
 
     /// Place in memory of a position.
-    pub const fn place(&self, word: u64) -> usize {
+    pub fn place(&self, word: u64) -> usize {
         (word % self.ring_words) as usize
     }
 
@@ -64,10 +64,10 @@ impl RingReader {
     pub fn ready(&mut self, written: u64, most: usize) -> Ready {
         let mut lost_scans = 0;
         if !self.is_intact(self.read, written) {
-            let oldest_kept = written.saturating_sub(self.ring_words / 2);
-            let first = oldest_kept.div_ceil(self.scan_words) * self.scan_words;
-            lost_scans = first.saturating_sub(self.read) / self.scan_words;
-            self.read += lost_scans * self.scan_words;
+            let oldest_kept = written.saturating_sub(self.ring_words.get() / 2);
+            let scans_passed = oldest_kept.saturating_add(self.scan_words.get() - 1) / self.scan_words;
+            lost_scans = scans_passed.saturating_sub(self.read_scans());
+            self.read += lost_scans * self.scan_words.get();
         }
         let waiting = written.saturating_sub(self.read) / self.scan_words;
         Ready { first_word: self.read, scans: waiting.min(most as u64) as usize, lost_scans }
@@ -77,12 +77,20 @@ impl RingReader {
     ///
     /// One scan is left as a moat: the word being written right now is not in `written` yet.
     pub const fn is_intact(&self, first_word: u64, written: u64) -> bool {
-        written.saturating_sub(first_word) + self.scan_words <= self.ring_words
+        written.saturating_sub(first_word) + self.scan_words.get() <= self.ring_words.get()
     }
 
     /// Moves on past scans that were copied or are not wanted.
     pub const fn advance(&mut self, scans: u64) {
-        self.read = self.read.saturating_add(scans.saturating_mul(self.scan_words));
+        self.read = self.read.saturating_add(scans.saturating_mul(self.scan_words.get()));
+    }
+}
+
+/// Lengths that are never 0, so that dividing by them needs no check.
+const fn at_least_one(words: usize) -> NonZeroU64 {
+    match NonZeroU64::new(words as u64) {
+        Some(words) => words,
+        None => NonZeroU64::MIN,
     }
 }
 
