@@ -3,12 +3,14 @@
 //! | level | line |
 //! |---|---|
 //! | error | source, link or alarm pin failed |
-//! | warn | storm, gap, kept messages given up, command refused |
-//! | info | settings in force, excursion closed, command obeyed, end |
+//! | warn | storm, gap, kept messages given up, command refused or unknown |
+//! | info | settings in force, also when introduced; excursion closed, unless a storm takes it in; command obeyed; end |
 //! | debug | excursion begun, acknowledgement |
 //!
-//! Levels are chosen when the image is built (`DEFMT_LOG=info`). A line is made where a record is made,
-//! never per sample. It changes no record: the log is for the bench, what counts travels in messages.
+//! Levels are chosen when the image is built (`DEFMT_LOG=info`; errors only without it). A line is made
+//! where a record is made, a command obeyed, an excursion begun, never per sample; but at `debug` every
+//! excursion of a storm has one, and an error comes again with every step that fails. Lines change no
+//! record: the log is for the bench, what counts travels in messages. `.ci/board logs` shows it.
 
 use crate::monitor::StepError;
 use core::fmt::Debug;

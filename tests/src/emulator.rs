@@ -19,8 +19,13 @@ pub struct Emulator {
     process: Child,
     /// Pseudo-terminal of UART 0; empty when it is on a socket.
     pub port: String,
-    lines: Receiver<String>,
+    chunks: Receiver<Chunk>,
+    /// What came before the terminal's name.
+    early: Vec<Chunk>,
 }
+
+/// Bytes up to and including a line's end, and whether they came by standard output.
+type Chunk = (bool, Vec<u8>);
 
 /// The emulated machine's reset line (QEMU Machine Protocol, a JSON object per line).
 #[derive(Debug)]
@@ -37,15 +42,16 @@ impl Emulator {
     pub fn boot(image: &Path, argument: &Path) -> Result<Self, String> {
         let mut emulator = Self::start(image, argument, &["-serial", "pty"])?;
         // "char device redirected to /dev/pts/N (label serial0)", on either output.
-        let mut said = String::new();
-        for line in &emulator.lines {
+        for chunk in &emulator.chunks {
+            let line = String::from_utf8_lossy(&chunk.1);
             if let Some(port) = line.split_whitespace().find(|word| word.starts_with("/dev/pts/")) {
                 port.clone_into(&mut emulator.port);
                 return Ok(emulator);
             }
-            said.push_str(&line);
+            emulator.early.push(chunk);
         }
-        Err(format!("the emulator named no terminal: {said}"))
+        let said: Vec<_> = emulator.early.iter().map(|(_, bytes)| String::from_utf8_lossy(bytes)).collect();
+        Err(format!("the emulator named no terminal: {}", said.concat()))
     }
 
     /// Boots `image` with `argument` on its command line, UART 0 on the socket returned. What the board
@@ -88,18 +94,20 @@ impl Emulator {
             .map_err(|error| format!("could not start qemu-system-arm: {error}; try installing it"))?;
         let stdout = process.stdout.take().map(|out| Box::new(out) as Box<dyn Read + Send>);
         let stderr = process.stderr.take().map(|out| Box::new(out) as Box<dyn Read + Send>);
-        let (lines_out, lines) = channel();
-        for output in [stdout, stderr].into_iter().flatten() {
-            let lines_out = lines_out.clone();
+        let (chunks_out, chunks) = channel();
+        for (output, is_stdout) in [(stdout, true), (stderr, false)] {
+            let (Some(output), chunks_out) = (output, chunks_out.clone()) else { continue };
             std::thread::spawn(move || {
-                for line in BufReader::new(output).lines().map_while(Result::ok) {
-                    if lines_out.send(line).is_err() {
+                // Not by `lines`: an image may write bytes that are no text.
+                let (mut output, mut bytes) = (BufReader::new(output), Vec::new());
+                while output.read_until(b'\n', &mut bytes).is_ok_and(|count| count > 0) {
+                    if chunks_out.send((is_stdout, std::mem::take(&mut bytes))).is_err() {
                         return;
                     }
                 }
             });
         }
-        Ok(Self { process, port: String::new(), lines })
+        Ok(Self { process, port: String::new(), chunks, early: Vec::new() })
     }
 
     fn accept(&mut self, listener: &TcpListener) -> Result<TcpStream, String> {
@@ -123,8 +131,21 @@ impl Emulator {
     /// When the image ended with a failure.
     pub fn wait(&mut self) -> Result<Vec<String>, String> {
         let status = self.process.wait().map_err(|error| error.to_string())?;
-        let lines = self.lines.iter().collect();
+        let lines =
+            self.chunks.iter().map(|(_, bytes)| String::from_utf8_lossy(&bytes).trim_end().to_owned());
+        let lines = lines.collect();
         if status.success() { Ok(lines) } else { Err(format!("the image ended with {status}")) }
+    }
+
+    /// Waits for the image to end; whether it ended well, and every byte it wrote to standard output.
+    ///
+    /// # Errors
+    /// When the emulator cannot be waited for.
+    pub fn wait_for_bytes(&mut self) -> Result<(bool, Vec<u8>), String> {
+        let status = self.process.wait().map_err(|error| error.to_string())?;
+        let chunks = std::mem::take(&mut self.early).into_iter().chain(self.chunks.iter());
+        let bytes = chunks.filter(|(is_stdout, _)| *is_stdout).flat_map(|(_, bytes)| bytes).collect();
+        Ok((status.success(), bytes))
     }
 
     /// Whether the image still runs.

@@ -16,6 +16,10 @@ fn main() {
     }
     println!("cargo::rustc-link-search={}", out.display());
     println!("cargo::rustc-link-arg=-Tlink.x");
+    if std::env::var_os("CARGO_FEATURE_DEFMT").is_some() {
+        // Keeps the log texts in the image's file, out of its flash.
+        println!("cargo::rustc-link-arg-bins=-Tdefmt.x");
+    }
     println!("cargo::rerun-if-changed=budget.x");
     println!("cargo::rerun-if-env-changed=LEGWISE_ROOM");
 }

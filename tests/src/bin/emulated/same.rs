@@ -15,6 +15,8 @@ use legwise_tests::replay::Replay;
 use std::path::Path;
 use std::time::Instant;
 
+/// Bytes of stack that must never have been used.
+const STACK_RESERVE_BYTES: usize = 256;
 /// Pairs of each scenario, and how long before its first disturbance they begin.
 const SCENARIO_PAIRS: f64 = 200_000.0;
 const LEAD_S: f64 = 0.02;
@@ -46,8 +48,23 @@ pub fn same(image: &Path) -> Outcome<()> {
             has_failed = true;
             explain(&emulated, &desktop);
         }
+        check_stack(&console)?;
     }
     if has_failed { Err("the board and the desktop differ".into()) } else { Ok(()) }
+}
+
+/// Holds the stack to what the linker's budget for RAM leaves it.
+fn check_stack(console: &str) -> Outcome<()> {
+    let numbers: Vec<usize> = console.split_whitespace().filter_map(|word| word.parse().ok()).collect();
+    let &[used, available] = numbers.as_slice() else {
+        return Err(format!("the board did not tell its stack: {console:?}"));
+    };
+    if used + STACK_RESERVE_BYTES > available {
+        return Err(format!(
+            "the stack went {used} bytes deep, of {available}; {STACK_RESERVE_BYTES} must be left"
+        ));
+    }
+    Ok(())
 }
 
 /// The frames from the answer to `Identify` on, sequence numbers counted from there. What came before

@@ -4,7 +4,9 @@
 
 use core::cell::Cell;
 use cortex_m_rt::entry;
-use cortex_m_semihosting::{debug, nr, syscall1};
+use cortex_m_semihosting::debug;
+#[cfg(not(feature = "defmt"))]
+use cortex_m_semihosting::{nr, syscall1};
 use legwise_board_emulated::replay::{Replay, draw_boot_id};
 use legwise_board_emulated::stack::high_water;
 use legwise_board_emulated::uart::Uart;
@@ -74,9 +76,18 @@ fn main() -> ! {
     }
 }
 
-/// Writes the stack's high-water mark to the emulator's console, in decimal and without `core::fmt`.
+/// Writes the stack's high-water mark to the emulator's console, in decimal and without `core::fmt`;
+/// where the console carries log frames, as one of them.
 fn tell_stack() {
     let (used, available) = high_water();
+    #[cfg(feature = "defmt")]
+    defmt::info!("stack {} of {} bytes", used, available);
+    #[cfg(not(feature = "defmt"))]
+    write_stack(used, available);
+}
+
+#[cfg(not(feature = "defmt"))]
+fn write_stack(used: usize, available: usize) {
     let mut line = *b"stack      0 of      0 bytes\n\0";
     write_number(&mut line, 12, used);
     write_number(&mut line, 22, available);
@@ -85,6 +96,7 @@ fn tell_stack() {
 }
 
 /// Writes digits so that the last one stands before `end`.
+#[cfg(not(feature = "defmt"))]
 fn write_number(line: &mut [u8], end: usize, mut number: usize) {
     for slot in line.iter_mut().take(end).rev().take(6) {
         *slot = b'0' + (number % 10) as u8;
