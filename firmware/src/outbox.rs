@@ -18,6 +18,8 @@ use legwise_protocol::message::{Loss, Message};
 
 /// What precedes a message in a queue: length (2 bytes), order (4), sample (8), little-endian.
 const HEADER: usize = 14;
+/// Longest form of a `Loss` message: its number and two counts.
+const LOSS_BYTES: usize = 11;
 
 /// A message in a queue.
 #[derive(Clone, Copy, Debug)]
@@ -305,7 +307,7 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
         if self.loss == self.told_loss {
             return;
         }
-        let mut buffer = [0; MESSAGE_BYTES];
+        let mut buffer = [0; LOSS_BYTES];
         let Ok(bytes) = framing::encode_message(&Message::Loss(self.loss), &mut buffer) else { return };
         if self.kept.is_open_for(bytes.len() + Self::RESERVE / 2) {
             self.order = self.order.wrapping_add(1);

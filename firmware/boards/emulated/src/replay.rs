@@ -15,7 +15,6 @@
 use core::cell::Cell;
 use core::ffi::c_int;
 use cortex_m_semihosting::{nr, syscall1};
-use legwise_firmware::block::BLOCK_PAIRS;
 use legwise_firmware::source::{PairSource, SourceDescription, Taken};
 use legwise_protocol::message::{GapCause, LegScale};
 
@@ -23,6 +22,8 @@ const MAGIC: &[u8; 8] = b"LWREPLAY";
 const LEG_BYTES: usize = 28;
 const HEADER_BYTES: usize = 32 + 2 * LEG_BYTES;
 const DELIVERY_BYTES: usize = 16;
+/// Codes read at once: their bytes lie on the stack.
+const CODES_AT_ONCE: usize = 64;
 
 /// What kept a recording from being played.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -98,8 +99,6 @@ pub struct Replay<'a> {
     header: ReplayHeader,
     description: SourceDescription,
     may_take: &'a Cell<bool>,
-    /// Bytes of one leg of one delivery.
-    bytes: [u8; 4 * BLOCK_PAIRS],
 }
 
 impl<'a> Replay<'a> {
@@ -123,7 +122,7 @@ impl<'a> Replay<'a> {
         let skew_ns = fields.i32();
         let legs = [fields.leg(), fields.leg()];
         let description = SourceDescription { sample_rate_mhz, skew_ns, legs };
-        Ok(Self { file, header, description, may_take, bytes: [0; 4 * BLOCK_PAIRS] })
+        Ok(Self { file, header, description, may_take })
     }
 
     /// What the file says about the run.
@@ -132,12 +131,15 @@ impl<'a> Replay<'a> {
     }
 
     fn read_leg(&mut self, codes: &mut [i32], pairs: usize) -> Result<(), ReplayError> {
-        let bytes = self.bytes.get_mut(..4 * pairs).ok_or(ReplayError::WrongFile)?;
-        if self.file.read(bytes) != bytes.len() {
-            return Err(ReplayError::Truncated);
-        }
-        for (code, bytes) in codes.iter_mut().zip(bytes.as_chunks::<4>().0) {
-            *code = i32::from_le_bytes(*bytes);
+        let mut buffer = [0; 4 * CODES_AT_ONCE];
+        for codes in codes.get_mut(..pairs).unwrap_or_default().chunks_mut(CODES_AT_ONCE) {
+            let bytes = buffer.get_mut(..4 * codes.len()).unwrap_or_default();
+            if self.file.read(bytes) != bytes.len() {
+                return Err(ReplayError::Truncated);
+            }
+            for (code, bytes) in codes.iter_mut().zip(bytes.as_chunks::<4>().0) {
+                *code = i32::from_le_bytes(*bytes);
+            }
         }
         Ok(())
     }
