@@ -5,9 +5,11 @@
 //! is converted like any other and counted as clipped: the true voltage may lie beyond it.
 //!
 //! Codes between the rails of an ordinary converter take a short way to the same number: with
-//! `k = 32 - shift`, `((code << k) * mantissa + (2^(shift-1) << k) + (offset << 32)) >> 32` is the upper
-//! word of one multiply-accumulate. A block with any other code takes the long way.
+//! `k = 32 - shift`, `(((code << k) * mantissa + 2^31) >> 32) + offset`, where the first term is the upper
+//! word of one multiplication that rounds: the half, `2^(shift-1)`, becomes 2^31 whatever the shift. A block
+//! with any other code takes the long way.
 
+use crate::interval::Interval;
 use legwise_protocol::message::LegScale;
 use legwise_protocol::units::{Microvolts, Span};
 
@@ -20,14 +22,8 @@ pub const fn is_valid(scale: &LegScale) -> bool {
 #[derive(Clone, Copy, Debug)]
 pub struct Calibration {
     scale: LegScale,
-    short: Option<Short>,
-}
-
-/// The short way, where there is one: exact for codes from rail to rail.
-#[derive(Clone, Copy, Debug)]
-struct Short {
-    code_shift: u32,
-    bias: i64,
+    /// `k` of the short way, where it is exact for codes from rail to rail.
+    code_shift: Option<u32>,
 }
 
 impl Calibration {
@@ -48,7 +44,7 @@ impl Calibration {
     /// Makes a scale ready. A shift out of range is bounded.
     pub fn new(scale: LegScale) -> Self {
         let scale = LegScale { shift: scale.shift.clamp(1, 40), ..scale };
-        Self { scale, short: Short::new(&scale) }
+        Self { scale, code_shift: short_way(&scale) }
     }
 
     /// The scale.
@@ -57,19 +53,29 @@ impl Calibration {
     }
 
     /// Converts `codes` into `microvolts` (the shorter length counts); the span of the codes.
+    /// Kept out of its callers, which are four: for the sake of flash and registers.
+    #[inline(never)]
     pub fn convert(&self, codes: &[i32], microvolts: &mut [i32]) -> Span {
-        let mut span = Span::EMPTY;
-        if let Some(Short { code_shift, bias }) = self.short {
-            let mantissa = i64::from(self.scale.mantissa);
-            for (microvolts, &code) in microvolts.iter_mut().zip(codes) {
-                span.include(code);
-                let shifted = i64::from(code.wrapping_shl(code_shift));
-                *microvolts = ((shifted * mantissa).wrapping_add(bias) >> 32) as i32;
-            }
-            if span.low >= self.scale.rail_low_code && span.high <= self.scale.rail_high_code {
-                return span;
-            }
+        let Some(code_shift) = self.code_shift else { return self.convert_any(codes, microvolts) };
+        let Some(&first) = codes.first() else { return Span::EMPTY };
+        let LegScale { mantissa, offset_uv, rail_low_code, rail_high_code, .. } = self.scale;
+        let mut seen = Interval::only(first);
+        for (microvolts, &code) in microvolts.iter_mut().zip(codes) {
+            seen.include(code);
+            let product = i64::from(code.wrapping_shl(code_shift)) * i64::from(mantissa);
+            *microvolts = (((product + (1 << 31)) >> 32) as i32).wrapping_add(offset_uv);
         }
+        if Interval::new(rail_low_code, rail_high_code).holds_all(seen.span()) {
+            seen.span()
+        } else {
+            self.convert_any(codes, microvolts)
+        }
+    }
+
+    /// The long way, for any code.
+    #[inline(never)]
+    fn convert_any(&self, codes: &[i32], microvolts: &mut [i32]) -> Span {
+        let mut span = Span::EMPTY;
         for (microvolts, &code) in microvolts.iter_mut().zip(codes) {
             span.include(code);
             *microvolts = self.scale.microvolts(code);
@@ -90,21 +96,18 @@ impl Calibration {
     }
 }
 
-impl Short {
-    /// `None` where the upper word would not hold the exact result at both rails.
-    fn new(scale: &LegScale) -> Option<Self> {
-        let shift = u32::from(scale.shift);
-        let code_shift = 32_u32.checked_sub(shift)?;
-        let half = 1_i64 << (shift - 1);
-        let reach = 1_i64 << (31 - code_shift.min(31));
-        let is_exact = [scale.rail_low_code, scale.rail_high_code].into_iter().all(|code| {
-            let code = i64::from(code);
-            let exact = ((code * i64::from(scale.mantissa) + half) >> shift) + i64::from(scale.offset_uv);
-            (-reach..reach).contains(&code) && exact.abs() <= i64::from(Microvolts::BOUND)
-        });
-        let bias = (i64::from(scale.offset_uv) << 32).wrapping_add(half << code_shift);
-        is_exact.then_some(Self { code_shift, bias })
-    }
+/// `k` of the short way; `None` where the upper word would not hold the exact result at both rails.
+fn short_way(scale: &LegScale) -> Option<u32> {
+    let shift = u32::from(scale.shift);
+    let code_shift = 32_u32.checked_sub(shift)?;
+    let half = 1_i64 << (shift - 1);
+    let reach = 1_i64 << (31 - code_shift.min(31));
+    let is_exact = [scale.rail_low_code, scale.rail_high_code].into_iter().all(|code| {
+        let code = i64::from(code);
+        let exact = ((code * i64::from(scale.mantissa) + half) >> shift) + i64::from(scale.offset_uv);
+        (-reach..reach).contains(&code) && exact.abs() <= i64::from(Microvolts::BOUND)
+    });
+    is_exact.then_some(code_shift)
 }
 
 /// Whether a pair has a leg at its rail.
@@ -173,7 +176,7 @@ mod tests {
         };
         for scale in [TWELVE_BIT, inverted, fine] {
             let calibration = Calibration::new(scale);
-            assert!(calibration.short.is_some());
+            assert!(calibration.code_shift.is_some());
             let step = usize::try_from((scale.rail_high_code - scale.rail_low_code) / 4095).unwrap();
             let mut microvolts = [0];
             for code in (scale.rail_low_code..=scale.rail_high_code).step_by(step) {

@@ -26,6 +26,7 @@ pub mod extremes;
 pub mod fakes;
 pub mod fft;
 pub mod front_end;
+mod interval;
 pub mod levels;
 pub mod limit_check;
 pub mod link;

@@ -3,6 +3,7 @@
 use crate::alignment::Aligner;
 use crate::block::{ALIGNED, BLOCK_PAIRS, Block, HISTORY, LOOKAHEAD, STAGED, Spans};
 use crate::calibration::{self, Calibration};
+use crate::interval::Interval;
 use crate::source::SourceDescription;
 use legwise_protocol::units::Span;
 
@@ -156,7 +157,8 @@ impl Staging {
     fn split_modes(&mut self, pairs: usize) -> Option<(Span, Span)> {
         let b_at_a: &[i32] =
             if self.aligner.is_skewed() { &self.aligned_b } else { self.leg_b.get(HISTORY..)? };
-        let (mut sums, mut differences) = (Span::EMPTY, Span::EMPTY);
+        let (&a, &b) = (self.leg_a.first()?, b_at_a.first()?);
+        let (mut sums, mut differences) = (Interval::only(a + b), Interval::only(a - b));
         let legs = self.leg_a.get(..pairs)?.iter().zip(b_at_a);
         for ((sum, difference), (&a, &b)) in self.twice_cm.iter_mut().zip(&mut self.dm).zip(legs) {
             *sum = a + b;
@@ -165,7 +167,7 @@ impl Staging {
             differences.include(a - b);
         }
         *self.dm.get_mut(pairs)? = *self.leg_a.get(pairs)? - *b_at_a.get(pairs)?;
-        Some((sums, differences))
+        Some((sums.span(), differences.span()))
     }
 
     /// Moves on past the block just dealt with: its tail becomes history, the lookahead moves up.
