@@ -10,6 +10,7 @@
 //! *settled* samples: those whose predecessor was in the same state.
 
 use crate::block::Block;
+use crate::interval::Interval;
 use legwise_protocol::message::{Level, Levels, Plateau};
 
 const BINS: usize = 1024;
@@ -118,7 +119,12 @@ impl LevelMeter {
 
     /// Sums the common mode of each stretch in one state, its first sample left out.
     fn take_plateaus(&mut self, block: &Block<'_>, threshold: i32) {
-        let mut range = StateRange::new(self.state, threshold);
+        let mut range = range_of(self.state, threshold);
+        if range.holds_all(block.spans.dm) {
+            let sum = block.twice_cm.iter().map(|&twice_cm| i64::from(twice_cm)).sum();
+            self.add_plateau(block.pairs() as u32, sum);
+            return;
+        }
         let (mut settled, mut sum) = (0_u32, 0_i64);
         for (&dm, &twice_cm) in block.dm.iter().zip(block.twice_cm) {
             if range.holds(dm) {
@@ -128,7 +134,7 @@ impl LevelMeter {
                 self.add_plateau(settled, sum);
                 (settled, sum) = (0, 0);
                 self.state = usize::from(dm > threshold) | usize::from(dm < -threshold) << 1;
-                range = StateRange::new(self.state, threshold);
+                range = range_of(self.state, threshold);
             }
         }
         self.add_plateau(settled, sum);
@@ -247,13 +253,20 @@ impl LevelMeter {
     fn mid_samples(&self, idle: Option<Mode>, driven: Option<Mode>) -> u32 {
         let Some(driven) = driven else { return 0 };
         let distance = driven.distance();
-        (distance * 3 / 10..=distance * 7 / 10)
-            .map(
-                |away| if driven.bin >= BINS / 2 { BINS / 2 + away } else { (BINS / 2).saturating_sub(away) },
-            )
-            .filter(|bin| idle.is_none_or(|idle| bin.abs_diff(idle.bin) > SKIRT))
-            .map(|bin| self.bins.get(bin).map_or(0, |bin| bin.count))
-            .fold(0, u32::saturating_add)
+        let (near, far) = (distance * 3 / 10, distance * 7 / 10);
+        let centre = BINS / 2;
+        let (from, to) = if driven.bin >= centre {
+            (centre + near, centre + far)
+        } else {
+            (centre.saturating_sub(far), centre.saturating_sub(near))
+        };
+        // Below the resting level's skirt, and above it; a range that ends before it begins is empty.
+        let held = |from: usize, end: usize| sum(self.bins.get(from..end).unwrap_or(&[]));
+        match idle {
+            Some(idle) => held(from, (to + 1).min(idle.bin.saturating_sub(SKIRT)))
+                .saturating_add(held(from.max(idle.bin + SKIRT + 1), to + 1)),
+            None => held(from, to + 1),
+        }
     }
 
     fn plateau(&self, state: usize) -> Plateau {
@@ -268,26 +281,12 @@ impl LevelMeter {
     }
 }
 
-/// The values of DM that belong to one state: `low` and the `width` values above it.
-#[derive(Clone, Copy)]
-struct StateRange {
-    low: i32,
-    width: u32,
-}
-
-impl StateRange {
-    fn new(state: usize, threshold: i32) -> Self {
-        let (low, high) = match state {
-            HIGH => (threshold.saturating_add(1), i32::MAX),
-            LOW => (i32::MIN, (-threshold).saturating_sub(1)),
-            _ => (-threshold, threshold),
-        };
-        Self { low, width: high.wrapping_sub(low) as u32 }
-    }
-
-    /// One subtraction and one comparison.
-    fn holds(self, dm: i32) -> bool {
-        dm.wrapping_sub(self.low) as u32 <= self.width
+/// The values of DM that belong to one state.
+const fn range_of(state: usize, threshold: i32) -> Interval {
+    match state {
+        HIGH => Interval::new(threshold.saturating_add(1), i32::MAX),
+        LOW => Interval::new(i32::MIN, (-threshold).saturating_sub(1)),
+        _ => Interval::new(-threshold, threshold),
     }
 }
 
@@ -305,6 +304,8 @@ impl Mode {
     }
 }
 
+/// Samples in some bins. Kept out of its callers, for the sake of flash.
+#[inline(never)]
 fn sum(bins: &[Bin]) -> u32 {
     bins.iter().map(|bin| bin.count).fold(0, u32::saturating_add)
 }
