@@ -23,76 +23,22 @@
 //!
 //! Hysteresis and hold-off only decide when an excursion *closes*: they add no sample to it and none
 //! to the counts. A block whose extremes touch no limit needs no look at its samples.
+//!
+//! Samples are positions in a block here: the check leaps from one sample outside to the next, and what
+//! lies between two leaps, a *stretch*, becomes one piece of an excursion.
 
+mod config;
 mod open;
+mod stretch;
+mod windows;
 
-use crate::block::{Block, Spans};
-use crate::calibration;
-use crate::extremes::is_edge;
-use legwise_protocol::limits::{Limit, LimitMask, LimitSet};
-use legwise_protocol::message::{Breach, Detection, Excursion, LegScale, Part};
-use legwise_protocol::units::Span;
-use open::{Open, Sample, Stretch};
-
-/// What the check needs to know.
-#[derive(Clone, Copy, Debug)]
-pub struct LimitConfig {
-    high_leg: i32,
-    low_leg: i32,
-    high_average: i32,
-    low_average: i32,
-    hysteresis_twice: i32,
-    hold_off_samples: u32,
-    longest_samples: u32,
-    /// `Some` where the source declares a skew between the legs.
-    edge_step_uv: Option<i32>,
-    legs: [LegScale; 2],
-}
-
-impl LimitConfig {
-    /// From validated settings. Limits are stored doubled, so the average needs no halving.
-    pub fn new(limits: &LimitSet, detection: &Detection, legs: [LegScale; 2], is_skewed: bool) -> Self {
-        let doubled = |window: Option<legwise_protocol::limits::Window>| match window {
-            Some(window) => (window.high.uv().saturating_mul(2), window.low.uv().saturating_mul(2)),
-            None => (i32::MAX, i32::MIN),
-        };
-        let (high_leg, low_leg) = doubled(limits.terminal);
-        let (high_average, low_average) = doubled(limits.average);
-        Self {
-            high_leg,
-            low_leg,
-            high_average,
-            low_average,
-            hysteresis_twice: i32::try_from(detection.hysteresis_uv.saturating_mul(2)).unwrap_or(i32::MAX),
-            hold_off_samples: detection.hold_off_samples.max(1),
-            longest_samples: detection.longest_samples.max(1),
-            edge_step_uv: is_skewed.then(|| i32::try_from(detection.edge_step_uv).unwrap_or(i32::MAX)),
-            legs,
-        }
-    }
-
-    /// Twice the distance beyond each limit, in bit order; negative inside. A limit that is not
-    /// watched gives a large negative number.
-    #[inline]
-    fn distances(&self, leg_a: i32, leg_b: i32, twice_cm: i32) -> [i32; Limit::COUNT] {
-        let (a, b) = (leg_a.saturating_mul(2), leg_b.saturating_mul(2));
-        [
-            a.saturating_sub(self.high_leg),
-            self.low_leg.saturating_sub(a),
-            b.saturating_sub(self.high_leg),
-            self.low_leg.saturating_sub(b),
-            twice_cm.saturating_sub(self.high_average),
-            self.low_average.saturating_sub(twice_cm),
-        ]
-    }
-
-    /// Whether any sample with these extremes breaks a limit.
-    fn is_any_outside(&self, spans: &Spans) -> bool {
-        let highest = self.distances(spans.leg_a.high, spans.leg_b.high, spans.twice_cm.high);
-        let lowest = self.distances(spans.leg_a.low, spans.leg_b.low, spans.twice_cm.low);
-        highest.into_iter().chain(lowest).any(|distance| distance > 0)
-    }
-}
+use crate::block::Block;
+pub use config::LimitConfig;
+use core::ops::Range;
+use legwise_protocol::limits::{Limit, LimitMask};
+use legwise_protocol::message::{Breach, Excursion, Part};
+use open::{Open, Piece};
+use stretch::{Stretch, count_beyond, samples, take_inside};
 
 /// Exact counts since the start.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
@@ -130,7 +76,6 @@ pub enum LimitEvent {
 pub struct LimitCheck {
     open: Option<Open>,
     counts: LimitCounts,
-    is_confirmed_outside: bool,
 }
 
 impl LimitCheck {
@@ -141,77 +86,19 @@ impl LimitCheck {
 
     /// Whether an excursion is open that is known not to be an edge suspect: the alarm condition.
     pub const fn is_confirmed_outside(&self) -> bool {
-        self.is_confirmed_outside
+        matches!(self.open, Some(Open { is_suspect: false, .. }))
     }
 
     /// Checks every sample of `block`.
     pub fn check(&mut self, config: &LimitConfig, block: &Block<'_>, events: &mut dyn FnMut(LimitEvent)) {
-        if self.open.is_none() && !config.is_any_outside(&block.spans) {
+        let broken = config.broken_in(&block.spans);
+        if self.open.is_none() && broken.is_empty() {
             return;
         }
-        let legs = block.leg_a.iter().zip(block.leg_b);
-        let modes = block.twice_cm.iter().zip(block.dm);
-        let codes = block.code_a.iter().zip(block.code_b);
-        let mut before = block.dm_before;
-        let mut ahead = block.dm.iter().skip(1);
-        let mut stretch = Stretch::default();
-        let samples = (block.first_sample..).zip(legs.zip(modes).zip(codes));
-        for (index, (((&leg_a, &leg_b), (&twice_cm, &dm)), (&code_a, &code_b))) in samples {
-            let after = ahead.next().copied().unwrap_or(block.dm_after);
-            let distances = config.distances(leg_a, leg_b, twice_cm);
-            let worst = distances.into_iter().fold(i32::MIN, i32::max);
-            if worst > 0 {
-                let is_clipped = block.clipped > 0 && calibration::is_clipped(&config.legs, code_a, code_b);
-                let sample = Sample { index, leg_a, leg_b, twice_cm, dm, is_edge: false, is_clipped };
-                let is_settled =
-                    self.open.as_ref().is_some_and(|open| !open.is_suspect && !open.is_full(config, index));
-                if is_settled {
-                    stretch.take(&sample, &distances, worst);
-                } else {
-                    self.flush(&mut stretch);
-                    let is_edge = config.edge_step_uv.is_some_and(|step| is_edge(before, dm, after, step));
-                    self.outside(config, &Sample { is_edge, ..sample }, &distances, events);
-                }
-            } else if self.open.is_some() {
-                self.flush(&mut stretch);
-                self.inside(config, &distances, events);
-            }
-            before = dm;
+        let mut at = 0;
+        while let Some(first) = self.next_outside(config, block, at, events) {
+            at = self.follow(config, block, broken, first, events);
         }
-        self.flush(&mut stretch);
-    }
-
-    /// Adds a stretch of samples outside to the open excursion and to the counts.
-    fn flush(&mut self, stretch: &mut Stretch) {
-        let Some(open) = &mut self.open else { return };
-        if stretch.outside == 0 {
-            return;
-        }
-        let Stretch { outside, counts, worst, extreme_twice_uv, extreme_sample, .. } = *stretch;
-        self.counts.outside += u64::from(outside);
-        let mut mask = LimitMask::NONE;
-        let totals = self.counts.outside_by_limit.iter_mut().zip(Limit::ALL);
-        for ((total, limit), &count) in totals.zip(&counts) {
-            *total += u64::from(count);
-            if count > 0 {
-                mask = mask.with(LimitMask::only(limit));
-            }
-        }
-        if worst > open.worst {
-            open.worst = worst;
-            open.breach.worst_limit = stretch.worst_limit;
-            open.breach.extreme_twice_uv = extreme_twice_uv;
-            open.breach.extreme_sample = extreme_sample;
-        }
-        let breach = &mut open.breach;
-        breach.limits = breach.limits.with(mask);
-        breach.outside_samples += u64::from(outside);
-        breach.area_twice_uv_samples = breach.area_twice_uv_samples.saturating_add(stretch.area);
-        breach.dm.merge(stretch.dm);
-        breach.clipped_samples += u64::from(stretch.clipped);
-        open.limits = open.limits.with(mask);
-        open.touch(stretch.last_outside);
-        *stretch = Stretch::default();
     }
 
     /// Closes an open excursion because what follows is not known.
@@ -219,120 +106,140 @@ impl LimitCheck {
         self.close(true, events);
     }
 
-    fn outside(
+    /// The position of the next sample outside; an open excursion takes the samples up to there, and
+    /// closes if it is due.
+    fn next_outside(
         &mut self,
         config: &LimitConfig,
-        sample: &Sample,
-        distances: &[i32; Limit::COUNT],
+        block: &Block<'_>,
+        from: usize,
         events: &mut dyn FnMut(LimitEvent),
-    ) {
-        self.counts.outside += 1;
-        let mut mask = LimitMask::NONE;
-        let (mut worst, mut worst_limit) = (0, Limit::LegAHigh);
-        let counts = self.counts.outside_by_limit.iter_mut();
-        for ((&distance, limit), count) in distances.iter().zip(Limit::ALL).zip(counts) {
-            if distance > 0 {
-                *count += 1;
-                mask = mask.with(LimitMask::only(limit));
-                if distance > worst {
-                    (worst, worst_limit) = (distance, limit);
-                }
+    ) -> Option<usize> {
+        let mut at = from;
+        if let Some(open) = &mut self.open {
+            let mut ahead = samples(block, at..block.pairs());
+            take_inside(config, &mut ahead, &config.clear_of(open.limits), &mut open.clear_run);
+            at = block.pairs() - ahead.len();
+            if open.clear_run < config.hold_off_samples {
+                return (at < block.pairs()).then_some(at);
             }
-        }
-        let one = Breach {
-            limits: mask,
-            worst_limit,
-            extreme_twice_uv: sample.value_twice(worst_limit),
-            extreme_sample: sample.index,
-            outside_samples: 1,
-            area_twice_uv_samples: worst as u64,
-            dm: Span { low: sample.dm, high: sample.dm },
-            clipped_samples: u64::from(sample.is_clipped),
-        };
-        let is_suspicious = sample.is_edge && mask.is_average_only();
-        match &mut self.open {
-            None => self.begin(sample, one, worst, is_suspicious, events),
-            Some(open)
-                if open.is_full(config, sample.index)
-                    && open.remains_suspect(sample.index, is_suspicious) =>
-            {
-                self.close(false, events);
-                self.begin(sample, one, worst, is_suspicious, events);
-            }
-            Some(open) if open.is_full(config, sample.index) => {
-                let part = if open.has_earlier_part { Part::Middle } else { Part::Begin };
-                self.counts.excursions += u64::from(!open.has_earlier_part);
-                events(LimitEvent::Closed(open.record(part, false, false)));
-                let limits = open.limits.with(mask);
-                let first_sample = sample.index;
-                let (is_suspect, has_earlier_part) = (false, true);
-                *open =
-                    Open { first_sample, breach: one, worst, limits, is_suspect, has_earlier_part, ..*open };
-                open.touch(sample.index);
-            }
-            Some(open) => {
-                merge_breach(&mut open.breach, &one, config);
-                open.worst = open.worst.max(worst);
-                open.is_suspect = open.remains_suspect(sample.index, is_suspicious);
-                open.limits = open.limits.with(mask);
-                open.touch(sample.index);
-            }
-        }
-        self.is_confirmed_outside = self.open.is_some_and(|open| !open.is_suspect);
-    }
-
-    fn begin(
-        &mut self,
-        sample: &Sample,
-        breach: Breach,
-        worst: i32,
-        is_suspect: bool,
-        events: &mut dyn FnMut(LimitEvent),
-    ) {
-        self.counts.begun += 1;
-        let number = self.counts.begun;
-        self.open = Some(Open {
-            number,
-            first_sample: sample.index,
-            last_outside: sample.index,
-            breach,
-            limits: breach.limits,
-            worst,
-            inside_run: 0,
-            has_earlier_part: false,
-            is_suspect,
-        });
-        events(LimitEvent::Begun { number, sample: sample.index });
-    }
-
-    fn inside(
-        &mut self,
-        config: &LimitConfig,
-        distances: &[i32; Limit::COUNT],
-        events: &mut dyn FnMut(LimitEvent),
-    ) {
-        let Some(open) = &mut self.open else { return };
-        let is_clear = distances
-            .iter()
-            .zip(Limit::ALL)
-            .all(|(&distance, limit)| !open.limits.contains(limit) || distance <= -config.hysteresis_twice);
-        open.inside_run = if is_clear { open.inside_run + 1 } else { 0 };
-        if open.inside_run >= config.hold_off_samples {
             self.close(false, events);
         }
+        config.inside.first_beyond(block, at)
     }
 
+    /// Follows an excursion from its sample outside at position `first`, until it closes, its part is
+    /// complete or the block ends; the position then. `broken` are the limits broken in the block.
+    fn follow(
+        &mut self,
+        config: &LimitConfig,
+        block: &Block<'_>,
+        broken: LimitMask,
+        first: usize,
+        events: &mut dyn FnMut(LimitEvent),
+    ) -> usize {
+        let index = block.first_sample + first as u64;
+        // Of a suspect, every sample outside has to be asked by itself whether it is an edge.
+        let may_be_suspect = config.is_skewed() && !self.is_confirmed_outside();
+        let room = match self.open.as_ref().map_or(0, |open| open.room(config, index)) {
+            _ if may_be_suspect => 1,
+            0 => u64::from(config.longest_samples),
+            room => room,
+        };
+        let until = first.saturating_add(usize::try_from(room).unwrap_or(usize::MAX)).min(block.pairs());
+
+        let mut stretch = Stretch::new(block, first, until);
+        // Limits broken since the excursion began, and within the stretch: counted up to `counted`.
+        let mut so_far = self.open.as_ref().map_or(LimitMask::NONE, |open| open.limits);
+        let (mut limits, mut counted) = (LimitMask::NONE, first);
+        let mut clear = if so_far.is_empty() { config.inside } else { config.clear_of(so_far) };
+        let is_closed = loop {
+            stretch.take_outside(config);
+            // If the block can break another limit, it must be known now whether this run did.
+            if so_far.with(broken) != so_far {
+                limits = limits.with(self.count(config, block, counted..stretch.end_outside));
+                counted = stretch.end_outside;
+                so_far = so_far.with(limits);
+                clear = config.clear_of(so_far);
+            }
+            stretch.take_inside(config, &clear);
+            let is_closed = stretch.clear_run >= config.hold_off_samples;
+            if is_closed || stretch.end() == until {
+                break is_closed;
+            }
+        };
+        if counted < stretch.end_outside {
+            limits = limits.with(self.count(config, block, counted..stretch.end_outside));
+        }
+        let is_suspicious = may_be_suspect && limits.is_average_only() && config.is_edge(block, first);
+        self.take(config, &stretch.piece(config, block, limits), is_suspicious, events);
+        if is_closed {
+            self.close(false, events);
+        } else if let Some(open) = &mut self.open {
+            open.clear_run = stretch.clear_run;
+        }
+        stretch.end()
+    }
+
+    /// Adds what a stretch has to the excursion, and begins one, or a part of one, where it is due.
+    fn take(
+        &mut self,
+        config: &LimitConfig,
+        piece: &Piece,
+        is_suspicious: bool,
+        events: &mut dyn FnMut(LimitEvent),
+    ) {
+        self.counts.outside += piece.breach.outside_samples;
+        let index = piece.first_sample;
+        match &mut self.open {
+            Some(open) if open.room(config, index) > 0 => {
+                open.is_suspect = open.remains_suspect(index, is_suspicious);
+                open.take(piece);
+            }
+            Some(open) if !open.remains_suspect(index, is_suspicious) => {
+                let part = if open.has_earlier_part { Part::Middle } else { Part::Begin };
+                self.counts.excursions += u64::from(!open.has_earlier_part);
+                open.is_suspect = false; // a part that is reported is no suspect, nor are those after it
+                events(LimitEvent::Closed(open.record(part, false)));
+                open.begin_part(piece);
+            }
+            _ => {
+                self.close(false, events);
+                self.counts.begun += 1;
+                let number = self.counts.begun;
+                self.open = Some(Open::new(number, piece, is_suspicious));
+                events(LimitEvent::Begun { number, sample: index });
+            }
+        }
+    }
+
+    /// Counts the samples of a part of a block that break each limit; the limits that are broken.
+    /// Kept out of its caller, for the sake of registers.
+    #[inline(never)]
+    fn count(&mut self, config: &LimitConfig, block: &Block<'_>, range: Range<usize>) -> LimitMask {
+        let mut limits = LimitMask::NONE;
+        let counts = count_beyond(config, block, &range);
+        for ((total, limit), count) in self.counts.outside_by_limit.iter_mut().zip(Limit::ALL).zip(counts) {
+            if count > 0 {
+                *total += u64::from(count);
+                limits = limits.with(LimitMask::only(limit));
+            }
+        }
+        limits
+    }
+
+    /// Closes the open excursion, if there is one.
     fn close(&mut self, is_cut: bool, events: &mut dyn FnMut(LimitEvent)) {
-        let Some(open) = self.open.take() else { return };
-        self.is_confirmed_outside = false;
-        let is_suspect = open.is_suspect;
-        if is_suspect {
+        let Some(open) = &self.open else { return };
+        if open.is_suspect {
             self.counts.edge_suspects += 1;
         } else if !open.has_earlier_part {
             self.counts.excursions += 1;
         }
         let part = if open.has_earlier_part { Part::Finish } else { Part::Whole };
-        events(LimitEvent::Closed(open.record(part, is_suspect, is_cut)));
+        let record = open.record(part, is_cut);
+        self.open = None;
+        events(LimitEvent::Closed(record));
     }
 }
 
@@ -343,22 +250,14 @@ pub fn merge_breach(breach: &mut Breach, other: &Breach, config: &LimitConfig) {
         breach.extreme_twice_uv = other.extreme_twice_uv;
         breach.extreme_sample = other.extreme_sample;
     }
+    add_sums(breach, other);
+}
+
+/// Takes all of `other` but its extreme into `breach`.
+fn add_sums(breach: &mut Breach, other: &Breach) {
     breach.limits = breach.limits.with(other.limits);
     breach.outside_samples += other.outside_samples;
     breach.area_twice_uv_samples = breach.area_twice_uv_samples.saturating_add(other.area_twice_uv_samples);
     breach.dm.merge(other.dm);
     breach.clipped_samples += other.clipped_samples;
-}
-
-impl LimitConfig {
-    /// Twice the distance of a breach's extreme beyond its limit.
-    fn beyond(&self, breach: &Breach) -> i32 {
-        let value = breach.extreme_twice_uv;
-        match breach.worst_limit {
-            Limit::LegAHigh | Limit::LegBHigh => value.saturating_sub(self.high_leg),
-            Limit::LegALow | Limit::LegBLow => self.low_leg.saturating_sub(value),
-            Limit::AverageHigh => value.saturating_sub(self.high_average),
-            Limit::AverageLow => self.low_average.saturating_sub(value),
-        }
-    }
 }

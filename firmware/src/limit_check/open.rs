@@ -1,116 +1,80 @@
-//! An excursion while it is open, and the samples that make it.
+//! An excursion while it is open.
 
-use super::LimitConfig;
-use legwise_protocol::limits::{Limit, LimitMask};
+use super::add_sums;
+use super::config::LimitConfig;
+use legwise_protocol::limits::LimitMask;
 use legwise_protocol::message::{Breach, Excursion, Part};
-use legwise_protocol::units::Span;
+
+/// What a stretch of samples adds to an excursion.
+#[derive(Clone, Copy, Debug)]
+pub(super) struct Piece {
+    /// First and last sample outside.
+    pub(super) first_sample: u64,
+    pub(super) last_outside: u64,
+    pub(super) breach: Breach,
+    /// Twice the distance of the extreme beyond its limit.
+    pub(super) worst: i32,
+}
 
 /// An open excursion (of its current part).
 #[derive(Clone, Copy, Debug)]
 pub(super) struct Open {
-    pub(super) number: u64,
-    pub(super) first_sample: u64,
-    pub(super) last_outside: u64,
-    pub(super) breach: Breach,
+    number: u64,
+    /// All of the part so far.
+    piece: Piece,
     /// Every limit broken since the excursion began, earlier parts included.
     pub(super) limits: LimitMask,
-    /// Twice the distance of the part's extreme beyond its limit.
-    pub(super) worst: i32,
-    pub(super) inside_run: u32,
+    /// Samples in a row, up to the latest, that are clear of these limits.
+    pub(super) clear_run: u32,
     pub(super) has_earlier_part: bool,
     /// Whether every sample outside so far may be a data edge seen through the skew.
     pub(super) is_suspect: bool,
 }
 
-/// One sample, as the check sees it.
-#[derive(Clone, Copy)]
-pub(super) struct Sample {
-    pub(super) index: u64,
-    pub(super) leg_a: i32,
-    pub(super) leg_b: i32,
-    pub(super) twice_cm: i32,
-    pub(super) dm: i32,
-    pub(super) is_edge: bool,
-    pub(super) is_clipped: bool,
-}
-
-/// Samples outside in a row, before they are added to the open excursion: kept small, because a long
-/// excursion must not cost the device more than it has.
-#[derive(Clone, Copy, Debug, Default)]
-pub(super) struct Stretch {
-    pub(super) outside: u32,
-    /// Samples outside each limit, in bit order.
-    pub(super) counts: [u32; Limit::COUNT],
-    pub(super) worst: i32,
-    pub(super) worst_limit: Limit,
-    pub(super) extreme_twice_uv: i32,
-    pub(super) extreme_sample: u64,
-    pub(super) area: u64,
-    pub(super) dm: Span,
-    pub(super) clipped: u32,
-    pub(super) last_outside: u64,
-}
-
-impl Stretch {
-    /// Takes a sample whose largest distance is `worst`.
-    #[inline]
-    pub(super) fn take(&mut self, sample: &Sample, distances: &[i32; Limit::COUNT], worst: i32) {
-        self.outside += 1;
-        for (count, &distance) in self.counts.iter_mut().zip(distances) {
-            *count += u32::from(distance > 0);
-        }
-        if worst > self.worst {
-            let which = distances.iter().zip(Limit::ALL).find(|&(&distance, _)| distance == worst);
-            self.worst = worst;
-            self.worst_limit = which.map_or(Limit::LegAHigh, |(_, limit)| limit);
-            self.extreme_twice_uv = sample.value_twice(self.worst_limit);
-            self.extreme_sample = sample.index;
-        }
-        self.area += u64::from(worst.unsigned_abs());
-        self.dm.include(sample.dm);
-        self.clipped += u32::from(sample.is_clipped);
-        self.last_outside = sample.index;
-    }
-}
-
-impl Sample {
-    /// Twice the voltage a limit is judged on.
-    pub(super) fn value_twice(&self, limit: Limit) -> i32 {
-        match limit {
-            Limit::LegAHigh | Limit::LegALow => self.leg_a.saturating_mul(2),
-            Limit::LegBHigh | Limit::LegBLow => self.leg_b.saturating_mul(2),
-            Limit::AverageHigh | Limit::AverageLow => self.twice_cm,
-        }
-    }
-}
-
 impl Open {
-    pub(super) fn touch(&mut self, index: u64) {
-        self.last_outside = index;
-        self.inside_run = 0;
+    pub(super) const fn new(number: u64, piece: &Piece, is_suspect: bool) -> Self {
+        let limits = piece.breach.limits;
+        Self { number, piece: *piece, limits, clear_run: 0, has_earlier_part: false, is_suspect }
     }
 
-    /// Whether the part is as long as one may be.
-    pub(super) const fn is_full(&self, config: &LimitConfig, index: u64) -> bool {
-        index - self.first_sample >= config.longest_samples as u64
+    /// Begins the next part.
+    pub(super) const fn begin_part(&mut self, piece: &Piece) {
+        self.piece = *piece;
+        self.limits = self.limits.with(piece.breach.limits);
+        self.clear_run = 0;
+        self.has_earlier_part = true;
+    }
+
+    /// Takes a piece into the present part.
+    pub(super) fn take(&mut self, piece: &Piece) {
+        let breach = &mut self.piece.breach;
+        if piece.worst > self.piece.worst {
+            self.piece.worst = piece.worst;
+            breach.worst_limit = piece.breach.worst_limit;
+            breach.extreme_twice_uv = piece.breach.extreme_twice_uv;
+            breach.extreme_sample = piece.breach.extreme_sample;
+        }
+        add_sums(breach, &piece.breach);
+        self.piece.last_outside = piece.last_outside;
+        self.clear_run = 0;
+        self.limits = self.limits.with(piece.breach.limits);
+    }
+
+    /// How many samples the part may still take from `index` on: none if it is as long as one may be.
+    pub(super) const fn room(&self, config: &LimitConfig, index: u64) -> u64 {
+        (config.longest_samples as u64).saturating_sub(index - self.piece.first_sample)
     }
 
     /// Whether it is still a suspect with one more sample outside: a peak that stands alone.
     pub(super) const fn remains_suspect(&self, index: u64, is_suspicious: bool) -> bool {
-        self.is_suspect && is_suspicious && index > self.last_outside + 1
+        self.is_suspect && is_suspicious && index > self.piece.last_outside + 1
     }
 
-    pub(super) fn record(&self, part: Part, is_edge_suspect: bool, is_cut: bool) -> Excursion {
+    pub(super) fn record(&self, part: Part, is_cut: bool) -> Excursion {
+        let Piece { first_sample, last_outside, breach, .. } = self.piece;
         // A part is at most longest_samples (a u32) long, plus nothing: the next one begins beyond it.
-        let samples = u32::try_from(self.last_outside - self.first_sample + 1).unwrap_or(u32::MAX);
-        Excursion {
-            number: self.number,
-            first_sample: self.first_sample,
-            samples,
-            breach: self.breach,
-            part,
-            is_edge_suspect,
-            is_cut,
-        }
+        let samples = u32::try_from(last_outside - first_sample + 1).unwrap_or(u32::MAX);
+        let (number, is_edge_suspect) = (self.number, self.is_suspect);
+        Excursion { number, first_sample, samples, breach, part, is_edge_suspect, is_cut }
     }
 }
