@@ -38,7 +38,7 @@ impl Calibration {
             gain_uncertainty_ppm: 0,
             offset_uncertainty_uv: 0,
         },
-        short: None,
+        code_shift: None,
     };
 
     /// Makes a scale ready. A shift out of range is bounded.
