@@ -27,6 +27,7 @@ pub mod fakes;
 pub mod fft;
 pub mod front_end;
 mod interval;
+pub mod halfband;
 pub mod levels;
 pub mod limit_check;
 pub mod link;

@@ -13,6 +13,7 @@
 use legwise_protocol::power;
 
 pub mod lines;
+pub mod rung;
 
 /// Equivalent noise bandwidth of the periodic Hann window, in bins (Harris 1978, table I).
 pub const HANN_ENBW_BINS: f64 = 1.5;
