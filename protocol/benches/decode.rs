@@ -26,7 +26,7 @@ fn mix(frames: u32) -> Vec<DeviceFrame> {
     let all = specimens::device_frames();
     let named = |name: &str| all.iter().find(|(found, _)| *found == name).unwrap().1.clone();
     let cycle = [
-        ("Spectrum", 6),
+        ("Spectra", 6),
         ("Summary", 4),
         ("Snippet", 4),
         ("Excursion", 3),
@@ -43,7 +43,7 @@ fn mix(frames: u32) -> Vec<DeviceFrame> {
         rng.fill_bytes(&mut payload);
         match &mut frame.message {
             Message::Snippet(snippet) => snippet.blocks = Bytes::from_slice_cut(&payload),
-            Message::Spectrum(spectrum) => spectrum.codes = Bytes::from_slice_cut(&payload),
+            Message::Spectra(spectra) => spectra.codes = Bytes::from_slice_cut(&payload),
             _ => {}
         }
         frame

@@ -13,6 +13,7 @@
 
 pub mod bytes;
 pub mod command;
+pub mod cross;
 pub mod decoder;
 pub mod framing;
 pub mod limits;
@@ -26,4 +27,4 @@ pub mod units;
 /// Version of the wire format: the first number of every [`message::Hello`].
 ///
 /// Raised when a message or command is appended; the change list is in `WIRE.md`.
-pub const WIRE_VERSION: u16 = 1;
+pub const WIRE_VERSION: u16 = 2;

@@ -35,7 +35,7 @@ pub enum Message {
     Gap(Gap),
     /// Signal levels of one interval.
     Levels(Levels),
-    /// Part of one averaged spectrum.
+    /// Part of one averaged spectrum of one mode. Devices before version 2 send it.
     Spectrum(SpectrumPart),
     /// Counts and extremes since the start.
     Totals(Totals),
@@ -45,6 +45,8 @@ pub enum Message {
     Reply(Reply),
     /// The source has no more samples, or the host asked to stop.
     End(End),
+    /// Part of the averaged spectra of one rung: both modes and their cross density. Since version 2.
+    Spectra(SpectraPart),
 }
 
 /// Who speaks.
@@ -414,6 +416,50 @@ pub struct SpectrumPart {
     pub codes: Bytes<PAYLOAD_BYTES>,
 }
 
+/// Which segments an average holds.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Hash, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub enum SegmentSet {
+    /// DM at rest from the first to the last sample of the segment.
+    Idle,
+    /// DM moved.
+    Driven,
+}
+
+/// Part of the averaged spectra of one rung of the decimation ladder and one set of segments.
+///
+/// One-sided densities in V²/Hz of CM and DM and their cross density `conj(C)·D`; Hann window
+/// (periodic), mean removed per segment. Segments follow each other with 50 % overlap unless `skipped`
+/// is above 0. The rate of rung k is the sample rate / 8^k.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct SpectraPart {
+    /// First pair of the first segment, at the full rate.
+    pub first_sample: u64,
+    /// From there to the last pair of the last segment, at the full rate.
+    pub span_samples: u64,
+    /// Which segments.
+    pub set: SegmentSet,
+    /// Rung of the decimation ladder: 0 is the full rate.
+    pub rung: u8,
+    /// Points per segment: bins are the rung's rate / `points` apart.
+    pub points: u16,
+    /// Segments averaged.
+    pub segments: u32,
+    /// Segments passed over meanwhile to save time.
+    pub skipped: u32,
+    /// Segments passed over meanwhile because they belong to the other set.
+    pub other: u32,
+    /// First bin that the whole holds; bin 0 is 0 Hz.
+    pub from_bin: u16,
+    /// Bins that the whole holds, over all its parts.
+    pub bins: u16,
+    /// Bin of the first code of this part.
+    pub first_bin: u16,
+    /// [`crate::cross`] bins, seven bytes each.
+    pub codes: Bytes<PAYLOAD_BYTES>,
+}
+
 /// A value and the sample at which it was first reached.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
 #[cfg_attr(feature = "defmt", derive(defmt::Format))]
@@ -551,7 +597,8 @@ impl Message {
             | Self::Levels(_)
             | Self::Spectrum(_)
             | Self::Totals(_)
-            | Self::Reply(_) => false,
+            | Self::Reply(_)
+            | Self::Spectra(_) => false,
         }
     }
 }

@@ -11,7 +11,7 @@ use postcard::experimental::max_size::MaxSize;
 
 const _: () = {
     assert!(DEVICE_BODY_BYTES == ENVELOPE_BYTES + MESSAGE_BYTES + CRC_BYTES);
-    assert!(DEVICE_FRAME_BYTES == 458 && REQUEST_FRAME_BYTES == 47);
+    assert!(DEVICE_FRAME_BYTES == 469 && REQUEST_FRAME_BYTES == 47);
     // A whole block of codes up to 22 bits fits one message: every converter below 23 bits.
     assert!(longest_block_bytes(22, BLOCK_PAIRS) <= PAYLOAD_BYTES);
     assert!(longest_block_bytes(23, BLOCK_PAIRS) > PAYLOAD_BYTES);

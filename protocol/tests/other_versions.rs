@@ -5,9 +5,10 @@ mod specimens;
 mod tables;
 
 use legwise_protocol::command::Command;
-use legwise_protocol::decoder::{DecoderCounts, DeviceDecoder, RequestDecoder};
-use legwise_protocol::framing::{DeviceFrame, Envelope};
-use legwise_protocol::message::Message;
+use legwise_protocol::decoder::{Decoder, DecoderCounts, DeviceDecoder, RequestDecoder};
+use legwise_protocol::framing::{DEVICE_FRAME_BYTES, DeviceFrame, Envelope, encode_device_frame};
+use legwise_protocol::message::{self, Message, SpectraPart};
+use serde::Deserialize;
 use tables::{bytes_of, checksum, content_of, table};
 
 /// A sound frame around any content.
@@ -54,9 +55,74 @@ fn a_later_message_is_skipped_but_its_kept_number_is_seen() {
     let envelope = specimens::kept(9, 1_000, 41);
     let mut buffer = [0; 64];
     let used = postcard::to_slice(&envelope, &mut buffer).unwrap().len();
-    buffer[used] = 13;
+    buffer[used] = 14;
     assert_eq!(read(&buffer[..used + 20]), (vec![(envelope, None)], UNKNOWN));
     assert_eq!(read_frames(&buffer[..used + 20]), (vec![], UNKNOWN));
+}
+
+/// The messages of version 1, in its order.
+#[derive(Debug, Deserialize)]
+#[allow(dead_code, reason = "only which of them was read matters")]
+enum MessageOfVersion1 {
+    Hello(message::Hello),
+    Settings(message::Settings),
+    Summary(message::Summary),
+    Excursion(message::Excursion),
+    Storm(message::Storm),
+    Snippet(message::SnippetPart),
+    Gap(message::Gap),
+    Levels(message::Levels),
+    Spectrum(message::SpectrumPart),
+    Totals(message::Totals),
+    Loss(message::Loss),
+    Reply(message::Reply),
+    End(message::End),
+}
+/// The longest frame of version 1.
+const FRAME_BYTES_OF_VERSION_1: usize = 458;
+
+/// What a reader of version 1 makes of a frame: its envelope and whether it knows the message; and counts.
+fn read_by_version_1(frame: &[u8]) -> (Vec<(Envelope, bool)>, DecoderCounts) {
+    let mut decoder = Decoder::<FRAME_BYTES_OF_VERSION_1>::new();
+    let mut items = Vec::new();
+    decoder.feed(frame, |body| {
+        let (envelope, rest) = postcard::take_from_bytes(body).unwrap();
+        items.push((envelope, postcard::from_bytes::<MessageOfVersion1>(rest).is_ok()));
+    });
+    (items, decoder.counts())
+}
+
+#[test]
+fn a_reader_of_version_1_skips_spectra_and_reads_the_rest() {
+    for (name, frame) in specimens::device_frames() {
+        let golden = sealed(&golden_content("Golden messages", name));
+        assert_eq!(read_by_version_1(&golden), (vec![(frame.envelope, name != "Spectra")], SOUND), "{name}");
+    }
+}
+
+/// A full payload of spectra still fits the buffer of version 1 after a month at a million pairs a
+/// second; with numbers longer than that it is counted as oversize, and the next frame is read.
+#[test]
+fn a_reader_of_version_1_stays_in_step_behind_the_longest_spectra() {
+    let mut spectra = specimens::longest_messages().pop().unwrap();
+    let mut read = |envelope| {
+        let mut bytes = [0; DEVICE_FRAME_BYTES];
+        let frame = DeviceFrame { envelope, message: spectra.clone() };
+        let used = encode_device_frame(&frame, &mut bytes).unwrap();
+        let gap = sealed(&golden_content("Golden messages", "Gap"));
+        let read = read_by_version_1(&[&bytes[..used], &gap].concat());
+        let Message::Spectra(part) = &mut spectra else { panic!("the last message is Spectra") };
+        let month = 30 * 86_400 * 1_000_000;
+        *part = SpectraPart { first_sample: month, span_samples: month, segments: 1 << 27, ..*part };
+        (part.skipped, part.other) = (1 << 27, 1 << 27);
+        read
+    };
+    let (items, counts) = read(specimens::longest_envelope());
+    assert_eq!((items.len(), items[0].1), (1, true), "the gap alone");
+    assert_eq!((counts.oversize_frames, counts.sound_frames), (1, 1));
+    let (items, counts) = read(specimens::passing(u32::MAX, 30 * 86_400 * 1_000_000));
+    assert_eq!(items.iter().map(|item| item.1).collect::<Vec<_>>(), [false, true]);
+    assert_eq!((counts.oversize_frames, counts.sound_frames), (0, 2));
 }
 
 #[test]

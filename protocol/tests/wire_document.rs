@@ -10,7 +10,7 @@ use legwise_protocol::framing::*;
 use legwise_protocol::limits::{Limit, LimitMask};
 use legwise_protocol::message::*;
 use legwise_protocol::receivers::ReceiverId;
-use legwise_protocol::{WIRE_VERSION, power, snippet};
+use legwise_protocol::{WIRE_VERSION, cross, power, snippet};
 use serde::Serialize;
 use serde::de::DeserializeOwned;
 use std::collections::BTreeMap;
@@ -53,6 +53,7 @@ fn every_enum_number_is_the_documented_one() {
     pin("GapCause", &[GapCause::Overrun, GapCause::Skipped, GapCause::Stopped, GapCause::Resynchronised]);
     pin("Part", &[Part::Whole, Part::Begin, Part::Middle, Part::Finish]);
     pin("Mode", &[Mode::Common, Mode::Differential]);
+    pin("SegmentSet", &[SegmentSet::Idle, SegmentSet::Driven]);
     pin("EndCause", &[EndCause::SourceExhausted, EndCause::Stopped]);
     pin("Limit", &Limit::ALL);
     let causes = [ResetCause::Unknown, ResetCause::PowerOn, ResetCause::Pin, ResetCause::Watchdog];
@@ -62,7 +63,7 @@ fn every_enum_number_is_the_documented_one() {
         "ReceiverId",
         &[&older[..], &[Lvds644A, MlvdsType1, MlvdsType2, FlexRay, Mil1553B, Mbp, Custom]].concat(),
     );
-    assert_eq!(tables::headings("enum ").len(), 11, "an enum in WIRE.md is not pinned here");
+    assert_eq!(tables::headings("enum ").len(), 12, "an enum in WIRE.md is not pinned here");
 }
 
 #[test]
@@ -110,6 +111,7 @@ fn lengths_are_the_documented_ones() {
         ("REQUEST_FRAME_BYTES", REQUEST_FRAME_BYTES),
         ("BLOCK_PAIRS", snippet::BLOCK_PAIRS),
         ("BLOCK_BYTES", snippet::BLOCK_BYTES),
+        ("BIN_BYTES", cross::BIN_BYTES),
         ("WIRE_VERSION", usize::from(WIRE_VERSION)),
     ];
     let code: BTreeMap<String, String> =
@@ -208,6 +210,23 @@ fn worked_power_codes_hold() {
         let back: f64 = row["back"].parse().unwrap();
         assert_eq!(power::encode(power), code, "{power:e}");
         assert!((power::decode(code) - back).abs() <= 1e-15 * back, "{:e}", power::decode(code));
+    }
+}
+
+#[test]
+fn worked_cross_codes_hold() {
+    for row in table("Worked cross codes") {
+        let number = |name: &str| -> f64 { row[name].parse().unwrap() };
+        let code = |name: &str| u16::from_str_radix(&row[name], 16).unwrap();
+        let (real, imaginary) = (code("real code"), code("imaginary code"));
+        assert_eq!(cross::encode(number("real") as f32), real, "{row:?}");
+        assert_eq!(cross::encode(number("imaginary") as f32), imaginary, "{row:?}");
+        assert_eq!(hex_of(&cross::pack(real, imaginary)), row["bytes"]);
+        let bytes = bytes_of(&row["bytes"]).try_into().unwrap();
+        assert_eq!(cross::unpack(bytes), (real, imaginary));
+        for (code, back) in [(real, number("real back")), (imaginary, number("imaginary back"))] {
+            assert!((cross::decode(code) - back).abs() <= 1e-15 * back.abs(), "{:e}", cross::decode(code));
+        }
     }
 }
 

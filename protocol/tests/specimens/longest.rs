@@ -132,6 +132,20 @@ pub fn longest_messages() -> Vec<Message> {
         Message::Loss(Loss { snippet_parts: u32::MAX, records: u32::MAX }),
         Message::Reply(Reply { to: u32::MAX, outcome: Outcome::Unsupported }),
         Message::End(End { cause: EndCause::Stopped, totals }),
+        Message::Spectra(SpectraPart {
+            first_sample: u64::MAX,
+            span_samples: u64::MAX,
+            set: SegmentSet::Driven,
+            rung: u8::MAX,
+            points: u16::MAX,
+            segments: u32::MAX,
+            skipped: u32::MAX,
+            other: u32::MAX,
+            from_bin: u16::MAX,
+            bins: u16::MAX,
+            first_bin: u16::MAX,
+            codes: payload,
+        }),
     ]
 }
 

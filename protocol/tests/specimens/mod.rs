@@ -10,6 +10,7 @@ pub use longest::*;
 
 use legwise_protocol::bytes::Bytes;
 use legwise_protocol::command::{Command, Request};
+use legwise_protocol::cross::BinCodes;
 use legwise_protocol::framing::{Delivery, DeviceFrame, Envelope};
 use legwise_protocol::limits::{Limit, LimitMask, LimitSet, Window};
 use legwise_protocol::message::*;
@@ -177,6 +178,31 @@ fn spectrum() -> SpectrumPart {
     }
 }
 
+fn spectra() -> SpectraPart {
+    let mut codes = Bytes::new();
+    for bin in [
+        BinCodes::encode(2.5e-9, 4.0e-13, (-3.1e-11, 2.0e-12)),
+        BinCodes::encode(0.0, 1.0, (0.0, -0.5)),
+        BinCodes { common: 0x1234, differential: 0xFFFF, cross: (0xFFF, 0x001) },
+    ] {
+        assert!(codes.extend(&bin.to_bytes()));
+    }
+    SpectraPart {
+        first_sample: 512,
+        span_samples: 819_200,
+        set: SegmentSet::Driven,
+        rung: 1,
+        points: 1024,
+        segments: 199,
+        skipped: 0,
+        other: 1_000,
+        from_bin: 47,
+        bins: 312,
+        first_bin: 101,
+        codes,
+    }
+}
+
 fn summary() -> Summary {
     Summary {
         first_sample: 128_000,
@@ -223,6 +249,7 @@ pub fn device_frames() -> Vec<(&'static str, DeviceFrame)> {
         ("Loss", kept(16_385, 21_600_001_280, 303), Message::Loss(Loss { snippet_parts: 130, records: 1 })),
         ("Reply", passing(u32::MAX, u64::MAX), Message::Reply(reply)),
         ("End", kept(0, 21_600_001_280, 304), Message::End(end)),
+        ("Spectra", passing(129, 820_224), Message::Spectra(spectra())),
         ("Settings that judge nothing", kept(1, 0, 1), Message::Settings(unjudged)),
         ("Summary of nothing", passing(9, 5), Message::Summary(Summary::default())),
     ]

@@ -56,6 +56,7 @@ impl Reader for DeviceDecoder {
             match &mut frame.message {
                 Message::Snippet(snippet) => snippet.blocks = payload,
                 Message::Spectrum(spectrum) => spectrum.codes = payload,
+                Message::Spectra(spectra) => spectra.codes = payload,
                 _ => {}
             }
             frame
