@@ -3,6 +3,7 @@
 
 mod specimens;
 mod streams;
+mod tables;
 
 use legwise_protocol::decoder::{DeviceDecoder, RequestDecoder};
 use legwise_protocol::framing::{DEVICE_FRAME_BYTES, REQUEST_FRAME_BYTES};
@@ -29,6 +30,7 @@ fn survive<R: Reader>(strings: u64, seed: u64) {
             assert_eq!(item, sent[index].0, "string {round}");
         });
         assert_eq!(due.len(), 0, "string {round}: an intact frame was lost");
+        model.settle_chance(reader.seen().unknown_frames);
         if round % 1024 == 0 || round + 1 == strings {
             assert_eq!(reader.seen(), model.counts().0, "string {round}");
         }

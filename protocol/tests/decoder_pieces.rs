@@ -3,6 +3,7 @@
 
 mod specimens;
 mod streams;
+mod tables;
 
 use legwise_protocol::decoder::{DecoderCounts, DeviceDecoder, RequestDecoder};
 use proptest::prelude::*;
