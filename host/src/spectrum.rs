@@ -3,7 +3,8 @@
 //! A log keeps averaged power spectral densities as 16-bit codes ([`legwise_protocol::power`]); a
 //! night holds tens of thousands of them. Here they become one density per mode: the mean, each
 //! spectrum weighted by the segments in it, which is the density one long average would have given.
-//! [`lines`] finds and measures the tones in it.
+//! [`lines`] finds and measures the tones in it. Spectra of the ladder hold both modes and their cross
+//! density by rung and set ([`rung`]); [`average`] gives their means.
 //!
 //! Conventions: one-sided density in V²/Hz, periodic Hann window, mean removed per segment. With
 //! `N` points at rate `fs` and the Hann noise bandwidth of 1.5 bins, power in a bin is
@@ -12,6 +13,7 @@
 
 use legwise_protocol::power;
 
+pub mod average;
 pub mod lines;
 pub mod rung;
 

@@ -116,6 +116,7 @@ impl LiveView {
             | Message::Snippet(_)
             | Message::Levels(_)
             | Message::Spectrum(_)
+            | Message::Spectra(_)
             | Message::Reply(_) => None,
         }
     }

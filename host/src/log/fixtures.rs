@@ -3,6 +3,7 @@
 
 use super::{About, Arrival, Log, Origin};
 use legwise_protocol::bytes::Bytes;
+use legwise_protocol::cross::BinCodes;
 use legwise_protocol::framing::{DEVICE_FRAME_BYTES, Delivery, DeviceFrame, Envelope, encode_device_frame};
 use legwise_protocol::limits::{Limit, LimitMask};
 use legwise_protocol::message::*;
@@ -181,6 +182,36 @@ pub(crate) fn spectrum(first_sample: u64, mode: Mode, seed: u16) -> [SpectrumPar
     })
 }
 
+/// Spectra of bins 30 to 129 in two parts; the codes of each bin are its number + `seed`, and beyond.
+pub(crate) fn spectra(first_sample: u64, set: SegmentSet, seed: u16) -> [SpectraPart; 2] {
+    [(30, 84), (84, 130)].map(|(first_bin, end)| {
+        let mut codes = Bytes::new();
+        for bin in first_bin..end {
+            assert!(codes.extend(&bin_codes(bin, seed).to_bytes()));
+        }
+        SpectraPart {
+            first_sample,
+            span_samples: 64,
+            set,
+            rung: 1,
+            points: 256,
+            segments: 65,
+            skipped: 66,
+            other: 67,
+            from_bin: 30,
+            bins: 100,
+            first_bin,
+            codes,
+        }
+    })
+}
+
+/// The codes of a bin of [`spectra`].
+pub(crate) fn bin_codes(bin: u16, seed: u16) -> BinCodes {
+    let common = bin + seed + 30_000;
+    BinCodes { common, differential: common + 1_000, cross: (bin + seed + 0x300, bin + seed + 0xB00) }
+}
+
 pub(crate) fn totals(samples: u64) -> Totals {
     let moment = |value| Moment { value, sample: 70 + value.unsigned_abs() as u64 };
     let extremes = |low, high| Extremes { low: moment(low), high: moment(high) };
@@ -213,6 +244,8 @@ pub(crate) fn gap() -> Gap {
 pub(crate) fn one_of_each() -> Vec<Message> {
     let [common, common_rest] = spectrum(1000, Mode::Common, 5).map(Message::Spectrum);
     let [differential, differential_rest] = spectrum(1000, Mode::Differential, 9).map(Message::Spectrum);
+    let [idle, idle_rest] = spectra(1000, SegmentSet::Idle, 5).map(Message::Spectra);
+    let [driven, driven_rest] = spectra(1000, SegmentSet::Driven, 9).map(Message::Spectra);
     vec![
         Message::Hello(hello()),
         Message::Settings(settings()),
@@ -226,6 +259,10 @@ pub(crate) fn one_of_each() -> Vec<Message> {
         differential,
         common_rest,
         differential_rest,
+        idle,
+        driven,
+        idle_rest,
+        driven_rest,
         Message::Totals(totals(72)),
         Message::Loss(Loss { snippet_parts: 111, records: 112 }),
         Message::Reply(Reply { to: 121, outcome: Outcome::Unsupported }),

@@ -28,6 +28,7 @@ pub(crate) mod fixtures;
 mod pending;
 mod rows;
 mod schema;
+pub mod spectra;
 mod spectrum;
 mod store;
 
@@ -37,7 +38,7 @@ pub(crate) use schema::TABLES;
 pub use store::{Arrival, LinkCounts, Stored};
 
 /// `PRAGMA user_version` of the logs this version writes, and the newest it reads.
-pub const SCHEMA_VERSION: i32 = 1;
+pub const SCHEMA_VERSION: i32 = 2;
 /// `PRAGMA application_id` of every log: the letters "LGW1".
 pub const APPLICATION_ID: i32 = 0x4C47_5731;
 /// Frames held in memory between two commits, and while nothing can be stored.

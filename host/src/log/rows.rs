@@ -5,8 +5,8 @@
 //! are stored as `i64::MAX`; a sample counter gets there after 292 000 years at 1 MS/s.
 
 use legwise_protocol::message::{
-    EndCause, Excursion, Gap, GapCause, Hello, Levels, Loss, Mode, Part, ResetCause, Settings, SnippetPart,
-    SpectrumPart, Storm, Summary, Totals,
+    EndCause, Excursion, Gap, GapCause, Hello, Levels, Loss, Mode, Part, ResetCause, SegmentSet, Settings,
+    SnippetPart, SpectraPart, SpectrumPart, Storm, Summary, Totals,
 };
 use legwise_protocol::receivers::{self, ReceiverId};
 use legwise_protocol::units::Span;
@@ -283,6 +283,36 @@ pub(super) fn spectrum(
             last.points,
             last.segments,
             last.skipped,
+            codes,
+        ],
+    )
+}
+
+/// The name of a set in the log and its exports.
+pub(super) const fn segment_set(set: SegmentSet) -> &'static str {
+    match set {
+        SegmentSet::Idle => "idle",
+        SegmentSet::Driven => "driven",
+    }
+}
+
+/// `codes` holds all bins; `last` is the last part.
+pub(super) fn spectra(connection: &Connection, run: i64, last: &SpectraPart, codes: &[u8]) -> Result<usize> {
+    execute(
+        connection,
+        "INSERT OR REPLACE INTO spectra (run, first_sample, span_samples, segment_set, rung, points, \
+         segments, skipped, other, first_bin, codes) VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)",
+        params![
+            run,
+            int(last.first_sample),
+            int(last.span_samples),
+            segment_set(last.set),
+            last.rung,
+            last.points,
+            last.segments,
+            last.skipped,
+            last.other,
+            last.from_bin,
             codes,
         ],
     )

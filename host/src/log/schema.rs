@@ -1,4 +1,8 @@
-//! Makes the tables of a new log, and tells a log from other files.
+//! Makes the tables of a new log, tells a log from other files, and reads older ones.
+//!
+//! A log is written by the run that made it and never again, so an older one stays as it is: what it lacks
+//! is put beside it, empty, in the temporary database of the connection that reads it. Queries find
+//! one set of tables whatever the version.
 //!
 //! SQLite's rules for databases in WAL mode on media that may only be read: *Write-Ahead Logging*,
 //! "Read-Only Databases", sqlite.org/wal.html.
@@ -16,8 +20,13 @@ const FORMAT: &str = "legwise log";
 /// How long opening waits for another program.
 const BUSY_WAIT: Duration = Duration::from_secs(2);
 
+/// The line of `schema.sql` behind which stands what each version after the first brought.
+const SINCE: [(i32, &str); 1] = [(2, "-- Since schema 2.\n")];
+/// How many of [`TABLES`] a log of schema 1 has, of schema 2, and so on.
+const TABLE_COUNTS: [usize; SCHEMA_VERSION as usize] = [15, 16];
+
 /// The tables of a log, in the order of `schema.sql`.
-pub(crate) const TABLES: [&str; 15] = [
+pub(crate) const TABLES: [&str; 16] = [
     "info",
     "run",
     "settings",
@@ -33,6 +42,7 @@ pub(crate) const TABLES: [&str; 15] = [
     "loss",
     "link",
     "note",
+    "spectra",
 ];
 
 /// Tables, versions and `info` of a new log, in one transaction.
@@ -75,7 +85,8 @@ pub(super) fn open_reading(path: &Path) -> Result<Connection, LogError> {
         Err(error) if needs_immutable(&error, path) => open_immutable(path)?,
         Err(error) => return Err(LogError::from_opening(error, path)),
     };
-    check(&connection, path)?;
+    let version = check(&connection, path)?;
+    stand_in(&connection, version)?;
     Ok(connection)
 }
 
@@ -126,7 +137,8 @@ fn immutable_uri(path: &Path) -> String {
     uri
 }
 
-fn check(connection: &Connection, path: &Path) -> Result<(), LogError> {
+/// Checks that the file is a log this version can read, and whole; its version.
+fn check(connection: &Connection, path: &Path) -> Result<i32, LogError> {
     let pragma = |name: &str| connection.pragma_query_value(None, name, |row| row.get::<_, i32>(0));
     if pragma("application_id")? != APPLICATION_ID {
         return Err(LogError::NotALog { path: path.to_path_buf() });
@@ -135,14 +147,33 @@ fn check(connection: &Connection, path: &Path) -> Result<(), LogError> {
     if found > SCHEMA_VERSION {
         return Err(LogError::NewerSchema { path: path.to_path_buf(), found, known: SCHEMA_VERSION });
     }
+    let index = usize::try_from(found).unwrap_or(0).saturating_sub(1);
+    let count = TABLE_COUNTS.get(index).copied().unwrap_or(TABLES.len());
     let mut statement =
         connection.prepare("SELECT count(*) FROM sqlite_schema WHERE type = 'table' AND name = ?")?;
-    for table in TABLES {
+    for table in TABLES.into_iter().take(count) {
         if statement.query_row([table], |row| row.get::<_, i64>(0))? != 1 {
             return Err(LogError::Damaged);
         }
     }
+    Ok(found)
+}
+
+/// Puts the tables that a log of `version` lacks, empty, into the temporary database of the connection.
+fn stand_in(connection: &Connection, version: i32) -> Result<(), LogError> {
+    for text in added_after(version) {
+        connection.execute_batch(&text.replace("CREATE TABLE ", "CREATE TEMP TABLE "))?;
+    }
     Ok(())
+}
+
+/// What each version after `version` added to the schema.
+fn added_after(version: i32) -> impl Iterator<Item = &'static str> {
+    SINCE.into_iter().filter(move |(since, _)| *since > version).filter_map(|(since, line)| {
+        let (_, added) = SCHEMA.split_once(line)?;
+        let next = SINCE.iter().find(|(later, _)| *later == since + 1);
+        Some(next.and_then(|(_, line)| added.split_once(line)).map_or(added, |(added, _)| added))
+    })
 }
 
 #[cfg(test)]
@@ -165,6 +196,20 @@ mod tests {
             connection.prepare("SELECT name FROM sqlite_schema WHERE type = 'table' ORDER BY rowid")?;
         let names: Vec<String> = statement.query_map([], |row| row.get(0))?.collect::<Result<_, _>>()?;
         assert_eq!(names, TABLES);
+        assert_eq!(TABLE_COUNTS.last(), Some(&TABLES.len()));
+        Ok(())
+    }
+
+    #[test]
+    fn what_each_version_added_makes_the_tables_of_the_next() -> Result<(), LogError> {
+        for (index, count) in TABLE_COUNTS.into_iter().enumerate() {
+            let connection = Connection::open_in_memory()?;
+            stand_in(&connection, index as i32 + 1)?;
+            let names = "SELECT name FROM sqlite_temp_schema WHERE type = 'table' ORDER BY rowid";
+            let mut statement = connection.prepare(names)?;
+            let names: Vec<String> = statement.query_map([], |row| row.get(0))?.collect::<Result<_, _>>()?;
+            assert_eq!(names, TABLES[count..], "a log of schema {}", index + 1);
+        }
         Ok(())
     }
 }

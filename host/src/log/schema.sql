@@ -1,4 +1,4 @@
--- Legwise log, schema 1. One file holds one night (or one recording). Tables are append-only,
+-- Legwise log, schema 2. One file holds one night (or one recording). Tables are append-only,
 -- except `run`, `totals` and `link`, whose single row per run is replaced by a newer account.
 -- Units are in the names: _uv microvolts, _twice_uv twice the value in microvolts, _samples and
 -- *_sample pair counts and indices, _mhz millihertz, _ns nanoseconds (UTC: since 1970-01-01).
@@ -88,7 +88,8 @@ CREATE TABLE levels (
   PRIMARY KEY (run, first_sample)
 ) STRICT, WITHOUT ROWID;
 
--- One averaged spectrum, put together from its parts. mode: 0 common, 1 differential.
+-- One averaged spectrum of one mode, put together from its parts; by devices of wire version 1, later
+-- ones fill `spectra`. mode: 0 common, 1 differential.
 -- codes: two bytes little-endian per bin (WIRE.md, power codes), V²/Hz one-sided.
 CREATE TABLE spectrum (
   run INTEGER NOT NULL, first_sample INTEGER NOT NULL, mode INTEGER NOT NULL, rung INTEGER NOT NULL,
@@ -118,3 +119,16 @@ CREATE TABLE link (
 
 -- What the tool did and noticed: connected, lost the port, clock step, note by the user.
 CREATE TABLE note (utc_ns INTEGER NOT NULL, kind TEXT NOT NULL, text TEXT NOT NULL) STRICT;
+
+-- Since schema 2.
+-- Averaged spectra of one rung of the ladder and one set of segments, put together from their parts:
+-- both modes and their cross density. segment_set: idle|driven. skipped: segments passed over to save
+-- time; other: because they belong to the other set. The first bin of codes is first_bin; its
+-- frequency is bin * rate / 8^rung / points. codes: seven bytes per bin (WIRE.md, power and cross codes).
+CREATE TABLE spectra (
+  run INTEGER NOT NULL, first_sample INTEGER NOT NULL, span_samples INTEGER NOT NULL,
+  segment_set TEXT NOT NULL, rung INTEGER NOT NULL, points INTEGER NOT NULL,
+  segments INTEGER NOT NULL, skipped INTEGER NOT NULL, other INTEGER NOT NULL,
+  first_bin INTEGER NOT NULL, codes BLOB NOT NULL,
+  PRIMARY KEY (run, first_sample, rung, segment_set)
+) STRICT, WITHOUT ROWID;

@@ -6,7 +6,7 @@
 use super::rows;
 use super::spectrum::Assembly;
 use legwise_protocol::framing::{Delivery, DeviceFrame};
-use legwise_protocol::message::{Message, Outcome, SpectrumPart};
+use legwise_protocol::message::{Message, Outcome};
 use rusqlite::{Connection, Result};
 use std::collections::BTreeMap;
 use std::collections::btree_map::Entry;
@@ -180,7 +180,18 @@ impl Run {
             Message::Totals(totals) => {
                 rows::totals(connection, run, frame.envelope.sample, totals, None)?;
             }
-            Message::Spectrum(part) => return self.spectrum(connection, part),
+            Message::Spectrum(part) => match self.spectra.take_mode(part) {
+                None => return Ok(Stored::Partial),
+                Some(codes) => {
+                    rows::spectrum(connection, run, part, &codes)?;
+                }
+            },
+            Message::Spectra(part) => match self.spectra.take_set(part) {
+                None => return Ok(Stored::Partial),
+                Some(codes) => {
+                    rows::spectra(connection, run, part, &codes)?;
+                }
+            },
             Message::Reply(reply) => {
                 if reply.outcome != Outcome::Done {
                     let text = format!("request {} was answered {:?}", reply.to, reply.outcome);
@@ -195,16 +206,6 @@ impl Run {
             }
         }
         Ok(Stored::New)
-    }
-
-    fn spectrum(&mut self, connection: &Connection, part: &SpectrumPart) -> Result<Stored> {
-        match self.spectra.take(part) {
-            None => Ok(Stored::Partial),
-            Some(codes) => {
-                rows::spectrum(connection, self.run, part, &codes)?;
-                Ok(Stored::New)
-            }
-        }
     }
 }
 

@@ -2,6 +2,7 @@
 
 use super::fixtures::*;
 use super::*;
+use crate::spectrum::rung::{BinTable, RungSpectra};
 use legwise_protocol::bytes::Bytes;
 use legwise_protocol::framing::DeviceFrame;
 use legwise_protocol::limits::{Limit, LimitMask};
@@ -186,6 +187,72 @@ fn spectra_come_back_whole() {
 }
 
 #[test]
+fn spectra_of_both_modes_come_back_whole_in_order_of_time() {
+    let mut log = temporary();
+    store_all(&mut log, &frames(BOOT, one_of_each()));
+    // An earlier boot is an earlier run; within a run by sample, whatever the order of arrival.
+    let later = spectra(900, SegmentSet::Driven, 11).map(Message::Spectra);
+    let first = spectra(70, SegmentSet::Idle, 13).map(Message::Spectra);
+    store_all(&mut log, &frames(BOOT + 1, later.into_iter().chain(first)));
+    assert_eq!(only(&log, "SELECT DISTINCT other FROM spectra", |row| row.get_unwrap::<_, i64>(0)), 67);
+    let mut seen = Vec::new();
+    let passed_over = spectra::visit(log.connection(), |run, spectra: &RungSpectra| {
+        seen.push((run, spectra.clone()));
+        Ok::<(), rusqlite::Error>(())
+    });
+    assert_eq!(passed_over.unwrap(), 0);
+    let expected = |first_sample, set, seed, rate_hz| RungSpectra {
+        rung: 1,
+        rate_hz,
+        points: 256,
+        set,
+        segments: 65,
+        skipped: 66,
+        is_overlapped: false,
+        first_sample,
+        span_samples: 64,
+        first_bin: 30,
+        bins: (30..130).map(|bin| BinTable::new().decode(bin_codes(bin, seed).to_bytes())).collect(),
+    };
+    let all = [
+        (1, expected(1000, SegmentSet::Driven, 9, 62_500.0)),
+        (1, expected(1000, SegmentSet::Idle, 5, 62_500.0)),
+        (2, expected(70, SegmentSet::Idle, 13, 0.0)),
+        (2, expected(900, SegmentSet::Driven, 11, 0.0)),
+    ];
+    assert_eq!(seen, all);
+}
+
+#[test]
+fn stored_spectra_that_cannot_be_read_are_counted_and_passed_over() {
+    let mut log = temporary();
+    for first_sample in 0..7 {
+        let parts = spectra(first_sample, SegmentSet::Idle, 1).map(Message::Spectra);
+        store_all(&mut log, &frames(BOOT, parts));
+    }
+    log.commit().unwrap();
+    for (first_sample, change) in [
+        (0, "segment_set = 'resting'"),
+        (1, "codes = x'0011223344556677'"),
+        (2, "first_bin = -1"),
+        (3, "rung = 256"),
+        (4, "segments = -7"),
+        (5, "skipped = 0"),
+    ] {
+        let sql = format!("UPDATE spectra SET {change} WHERE first_sample = {first_sample}");
+        assert_eq!(log.connection().execute(&sql, []).unwrap(), 1);
+    }
+    let mut seen = Vec::new();
+    let passed_over = spectra::visit(log.connection(), |_, spectra: &RungSpectra| {
+        seen.push((spectra.first_sample, spectra.is_overlapped));
+        Ok::<(), LogError>(())
+    });
+    assert_eq!((passed_over.unwrap(), seen), (5, vec![(5, true), (6, false)]));
+    let stopped = spectra::visit(log.connection(), |_, _| Err(LogError::Busy));
+    assert!(matches!(stopped, Err(LogError::Busy)), "the caller can stop");
+}
+
+#[test]
 fn empty_spans_and_missing_levels_are_null_and_come_back_empty() {
     let quiet = Summary { first_sample: 7, ..Summary::default() };
     let mut log = temporary();
@@ -286,11 +353,12 @@ fn spectra_that_lost_a_part_are_noted_at_the_end() {
     let [first, _] = spectrum(0, Mode::Common, 0).map(Message::Spectrum);
     let [_, last] = spectrum(9000, Mode::Common, 0).map(Message::Spectrum);
     let [open, _] = spectrum(18_000, Mode::Common, 0).map(Message::Spectrum);
-    store_all(&mut log, &frames(BOOT, [first, last, open]));
+    let [_, both] = spectra(0, SegmentSet::Idle, 0).map(Message::Spectra);
+    store_all(&mut log, &frames(BOOT, [first, last, open, both]));
     log.finish().unwrap();
-    assert_eq!(count(&log, "spectrum"), 0);
+    assert_eq!((count(&log, "spectrum"), count(&log, "spectra")), (0, 0));
     let text: String = only(&log, "SELECT text FROM note WHERE kind = 'spectra'", |row| row.get_unwrap(0));
-    assert_eq!(text, "3 spectra were dropped because a part was missing");
+    assert_eq!(text, "4 spectra were dropped because a part was missing");
 }
 
 #[test]

@@ -1,6 +1,7 @@
 //! Files that are no log, logs left by a crash, logs read meanwhile.
 
 use super::*;
+use crate::report::{Options, Report};
 
 fn try_open(path: &Path) -> LogError {
     let error = Log::open(path).expect_err("this must not open");
@@ -218,4 +219,46 @@ fn transactions_with_kept_messages_are_synced_and_others_are_not() {
     assert_eq!(level(&log), 1);
     log.commit().unwrap();
     assert_eq!((count(&reader, "summary"), count(&reader, "gap")), (2, 1));
+}
+
+/// The bytes of a log that schema 1 wrote: one of each message it knew, by two boots 100 ms a frame.
+const LOG_OF_SCHEMA_1: &[u8] = include_bytes!("schema_1.sqlite");
+
+#[test]
+fn a_log_of_schema_1_reads_as_it_did_and_lacks_what_is_new() {
+    let directory = tempfile::tempdir().unwrap();
+    let path = directory.path().join("old.log");
+    std::fs::write(&path, LOG_OF_SCHEMA_1).unwrap();
+    let old = Log::open(&path).unwrap();
+    assert_eq!(only(&old, "PRAGMA user_version", |row| row.get_unwrap::<_, i64>(0)), 1);
+    let mut same = temporary();
+    let sent: Vec<_> = [BOOT, BOOT + 1]
+        .into_iter()
+        .flat_map(|boot| {
+            let is_old = |message: &Message| !matches!(message, Message::Spectra(_));
+            frames(boot, one_of_each().into_iter().filter(is_old))
+        })
+        .collect();
+    for (index, frame) in sent.iter().enumerate() {
+        same.store(frame, at_ms(100 * index as i64)).unwrap();
+    }
+    same.finish().unwrap();
+    assert_eq!(dump(&old), dump(&same));
+    assert_eq!((count(&old, "spectrum"), count(&old, "spectra")), (4, 0));
+    let report = Report::from_log(&old, &Options::default()).unwrap();
+    assert_eq!((report.recording.pairs, report.excursions.count), (14_400, 162));
+    drop(old);
+    assert_eq!(std::fs::read(&path).unwrap(), LOG_OF_SCHEMA_1, "the file was touched");
+
+    Connection::open(&path).unwrap().execute_batch("DROP TABLE spectrum").unwrap();
+    assert!(matches!(try_open(&path), LogError::Damaged), "its own tables must be there");
+}
+
+#[test]
+fn a_log_of_this_schema_without_its_newest_table_is_damaged() {
+    let directory = tempfile::tempdir().unwrap();
+    let path = directory.path().join("lacking.log");
+    make(&path).finish().unwrap();
+    Connection::open(&path).unwrap().execute_batch("DROP TABLE spectra").unwrap();
+    assert!(matches!(try_open(&path), LogError::Damaged));
 }
