@@ -2,9 +2,11 @@
 //!
 //! Columns are those of `schema.sql`, whose names carry the units; an empty field is NULL. Tables on
 //! the sample counter get a `time_utc` column behind it (RFC 3339, microseconds), filled where the
-//! run has clock pairs ([`RunClock`]). Two tables are unpacked:
+//! run has clock pairs ([`RunClock`]). Three tables are unpacked:
 //!
 //! * `spectrum`: one line per bin, `frequency_hz` = bin · rate / 2^rung / points;
+//! * `spectra`: one line per bin with both modes and the cross density conj(C)·D,
+//!   `frequency_hz` = bin · rate / 8^rung / points;
 //! * `snippet`: one line per pair, in volts; where a block cannot be decoded or the scale of the run
 //!   is not known, the volts stay empty.
 //!
@@ -105,7 +107,8 @@ fn write_file(log: &Log, clocks: &Clocks, table: &str, path: &Path) -> Result<()
     let file = OpenOptions::new().write(true).create_new(true).open(path).map_err(failed)?;
     let mut sheet = csv::Writer::from_writer(BufWriter::new(file));
     let rows = match table {
-        "spectrum" => unpack::spectra(log, clocks, &mut sheet),
+        "spectrum" => unpack::single_spectra(log, clocks, &mut sheet),
+        "spectra" => unpack::spectra(log, clocks, &mut sheet),
         "snippet" => unpack::snippets(log, clocks, &mut sheet),
         _ => plain(log, clocks, table, &mut sheet),
     };

@@ -5,7 +5,7 @@ use crate::log::About;
 use crate::log::fixtures::*;
 use legwise_protocol::bytes::Bytes;
 use legwise_protocol::message::{Message, SnippetPart};
-use legwise_protocol::power;
+use legwise_protocol::{cross, power};
 
 fn stored(about: &About, messages: Vec<Message>) -> Log {
     let mut log = Log::temporary(about).unwrap();
@@ -42,7 +42,7 @@ fn every_table_becomes_a_file_with_its_columns() {
     let names: Vec<_> = paths.iter().map(|path| path.file_stem().unwrap().to_str().unwrap()).collect();
     assert_eq!(names, TABLES);
     for (table, path) in TABLES.iter().zip(&paths) {
-        if matches!(*table, "spectrum" | "snippet") {
+        if matches!(*table, "spectrum" | "spectra" | "snippet") {
             continue;
         }
         let mut reader = csv::Reader::from_path(path).unwrap();
@@ -73,7 +73,7 @@ fn values_null_json_and_times_are_written_as_they_are() {
     let info = exported(&log, "info");
     assert_eq!(info.0, ["key", "value"]);
     let notes = exported(&log, "note");
-    assert_eq!(field(&notes, 0, "time_utc"), "2023-11-14T22:13:20.014000Z");
+    assert_eq!(field(&notes, 0, "time_utc"), "2023-11-14T22:13:20.018000Z");
 }
 
 #[test]
@@ -93,6 +93,35 @@ fn spectra_are_written_by_bin_with_frequency_and_density() {
         let expected = power::decode(bin + seed);
         // Six digits: half a unit of the last one.
         assert!((density / expected - 1.0).abs() <= 5e-6, "{density:e} {expected:e}");
+    }
+}
+
+#[test]
+fn spectra_of_the_ladder_are_written_by_bin_with_both_modes_and_cross_density() {
+    let log = stored(&about(), one_of_each());
+    let spectra = exported(&log, "spectra");
+    assert_eq!(spectra.1.len(), 2 * 100);
+    for (row, bin, set, seed) in [(0, 30_u16, "driven", 9), (99, 129, "driven", 9), (100 + 41, 71, "idle", 5)]
+    {
+        assert_eq!(field(&spectra, row, "bin"), bin.to_string());
+        assert_eq!((field(&spectra, row, "set"), field(&spectra, row, "rung")), (set, "1"));
+        assert_eq!((field(&spectra, row, "segments"), field(&spectra, row, "first_sample")), ("65", "1000"));
+        assert!(field(&spectra, row, "time_utc").starts_with("2023-11-14T22:13:"));
+        // Rung 1 of 500 kS/s is 62.5 kS/s; 256 points.
+        let frequency: f64 = field(&spectra, row, "frequency_hz").parse().unwrap();
+        assert_eq!(frequency, f64::from(bin) * 62_500.0 / 256.0);
+        let codes = bin_codes(bin, seed);
+        for (column, expected) in [
+            ("cm_v2_per_hz", power::decode(codes.common)),
+            ("dm_v2_per_hz", power::decode(codes.differential)),
+            ("cross_re_v2_per_hz", cross::decode(codes.cross.0)),
+            ("cross_im_v2_per_hz", cross::decode(codes.cross.1)),
+        ] {
+            let density: f64 = field(&spectra, row, column).parse().unwrap();
+            // Six digits: half a unit of the last one.
+            assert!((density / expected - 1.0).abs() <= 5e-6, "{column}: {density:e} {expected:e}");
+        }
+        assert!(field(&spectra, row, "cross_im_v2_per_hz").starts_with('-'));
     }
 }
 
@@ -133,6 +162,7 @@ fn without_clock_or_greeting_times_and_scales_stay_empty() {
         ("summary", &["time_utc"][..]),
         ("snippet", &["time_utc", "leg_a_v", "leg_b_v"]),
         ("spectrum", &["time_utc", "frequency_hz"]),
+        ("spectra", &["time_utc", "frequency_hz"]),
     ] {
         let table = exported(&log, table);
         assert!(!table.1.is_empty());

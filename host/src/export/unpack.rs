@@ -1,13 +1,73 @@
-//! The two tables whose rows hold packed data: spectra by bin, snippets by pair.
+//! The tables whose rows hold packed data: spectra by bin, snippets by pair.
 
 use super::{Clocks, RowError, Sheet};
-use crate::log::Log;
-use legwise_protocol::message::LegScale;
+use crate::log::{Log, spectra};
+use legwise_protocol::message::{LegScale, SegmentSet};
 use legwise_protocol::power;
 use legwise_protocol::snippet::{BLOCK_PAIRS, decode_block};
 
-/// One line per bin of every spectrum.
+/// One line per bin of every average of the ladder.
 pub(super) fn spectra(log: &Log, clocks: &Clocks, sheet: &mut Sheet) -> Result<(), RowError> {
+    sheet.write_record([
+        "run",
+        "first_sample",
+        "time_utc",
+        "set",
+        "rung",
+        "segments",
+        "bin",
+        "frequency_hz",
+        "cm_v2_per_hz",
+        "dm_v2_per_hz",
+        "cross_re_v2_per_hz",
+        "cross_im_v2_per_hz",
+    ])?;
+    let mut time = (None, String::new());
+    spectra::visit(log.connection(), |run, spectra| {
+        let place = Some((run, spectra.first_sample));
+        if time.0 != place {
+            let first_sample = i64::try_from(spectra.first_sample).unwrap_or(i64::MAX);
+            time = (place, clocks.text(run, first_sample));
+        }
+        let [run, first_sample, rung, segments] = [
+            run.to_string(),
+            spectra.first_sample.to_string(),
+            spectra.rung.to_string(),
+            spectra.segments.to_string(),
+        ];
+        let set = match spectra.set {
+            SegmentSet::Idle => "idle",
+            SegmentSet::Driven => "driven",
+        };
+        for (place, bin) in spectra.bins.iter().enumerate() {
+            let is_known = spectra.rate_hz > 0.0;
+            let frequency = if is_known { spectra.frequency_hz(place).to_string() } else { String::new() };
+            let number = (spectra.first_bin + place).to_string();
+            // Eleven bits are coded, of the cross density six: no digit is hidden.
+            let [cm, dm, re, im] = [bin.common, bin.differential, bin.cross.0, bin.cross.1]
+                .map(|density| format!("{density:.5e}"));
+            sheet.write_record([
+                &run,
+                &first_sample,
+                &time.1,
+                set,
+                &rung,
+                &segments,
+                &number,
+                &frequency,
+                &cm,
+                &dm,
+                &re,
+                &im,
+            ])?;
+        }
+        Ok::<(), RowError>(())
+    })?;
+    Ok(())
+}
+
+/// One line per bin of every spectrum of a single mode.
+pub(super) fn single_spectra(log: &Log, clocks: &Clocks, sheet: &mut Sheet) -> Result<(), RowError> {
     sheet.write_record([
         "run",
         "first_sample",

@@ -1,30 +1,137 @@
-//! The spectral part: averages what is stored at the full rate and lists the strongest lines.
+//! The spectral part: averages what is stored and lists the strongest lines of all rungs.
+//!
+//! Each rung of the ladder is searched on its own. Where two overlap, the lower one tells up to 0.35 of its
+//! rate and the higher one from there on; a line that shows in both near the crossover is the lower
+//! rung's, whose bins are finer. Logs of devices of wire version 1 hold the full rate only.
 
 use super::ReportError;
 use super::figures::rounded_volts;
-use super::model::{ModeSpectrum, Spectra, SpectralLine};
+use super::model::{ModeSpectrum, RungSpectrum, Spectra, SpectralLine};
 use super::runs::{Run, count};
+use crate::log::spectra;
+use crate::spectrum::average::{RungAverages, RungMean};
 use crate::spectrum::lines::{Line, LineMethod, find};
-use crate::spectrum::{HANN_ENBW_BINS, PowerTable, SpectrumAverage};
+use crate::spectrum::rung::RUNG_RATIO;
+use crate::spectrum::{BLANKED_BINS, Density, HANN_ENBW_BINS, PowerTable, SpectrumAverage};
+use legwise_protocol::message::Mode;
 use rusqlite::Connection;
 use std::collections::BTreeMap;
+use std::ops::Range;
 
 /// Lines listed per mode.
 pub(crate) const LINES: usize = 8;
+/// Lines looked for per rung: some of them lie where another rung tells.
+const LINES_PER_RUNG: usize = 64;
+/// A rung tells up to this share of its rate.
+const CROSSOVER: f64 = 0.35;
+/// A line this near a crossover, or two this near each other there, in bins of the higher rung.
+const NEAR_BINS: f64 = 2.0;
+/// A line this near the last bin published may be the skirt of one beyond it.
+const END_BINS: f64 = 1.5;
+
+/// The density of one mode at one rung.
+struct Band {
+    rung: u8,
+    density: Density,
+    /// Bins the device published.
+    published: Range<usize>,
+    spectra: u64,
+    skipped: u64,
+}
+
+impl Band {
+    fn frequency_hz(&self, bin: usize) -> f64 {
+        bin as f64 * self.density.bin_hz()
+    }
+
+    fn lowest_hz(&self) -> f64 {
+        self.frequency_hz(self.published.start)
+    }
+
+    fn highest_hz(&self) -> f64 {
+        self.frequency_hz(self.published.end.saturating_sub(1))
+    }
+
+    /// Noise floor with lines, and what lies next to the ends of the band, left out, V/√Hz.
+    fn noise_floor_v_per_rthz(&self) -> f64 {
+        let end = self.density.v2_per_hz.len().saturating_sub(BLANKED_BINS).min(self.published.end);
+        self.density.floor_of(self.published.start.max(BLANKED_BINS)..end).sqrt()
+    }
+
+    /// What lies next to 0 Hz: the frequency below which it lies, Hz, and its value, V rms.
+    fn low_frequency_rest(&self) -> (f64, f64) {
+        if self.published.start == 0 {
+            return self.density.low_frequency_rest();
+        }
+        let (bin_hz, end) = (self.density.bin_hz(), self.published.start.max(BLANKED_BINS));
+        let bins = self.density.v2_per_hz.get(self.published.start..end).unwrap_or_default();
+        ((end as f64 - 0.5) * bin_hz, (bins.iter().sum::<f64>() * bin_hz).sqrt())
+    }
+}
+
+/// Averages all spectra.
+pub(crate) fn read(connection: &Connection, runs: &[Run]) -> Result<Spectra, ReportError> {
+    let single: u64 = connection.query_row("SELECT count(*) FROM spectrum", [], |row| count(row, 0))?;
+    let (ladder, left_out) = read_ladder(connection)?;
+    if ladder.is_empty() {
+        let spectra = read_single(connection, runs)?;
+        return Ok(Spectra { left_out: spectra.left_out + left_out, ..spectra });
+    }
+    let of = |mode| {
+        let band = |rung: &RungMean| {
+            let mean = &rung.mean;
+            let published = mean.first_bin..mean.first_bin + mean.bins.len();
+            let density = mean.density(mode);
+            Band { rung: mean.rung, density, published, spectra: rung.spectra, skipped: mean.skipped }
+        };
+        mode_spectrum(&ladder.iter().map(band).collect::<Vec<_>>())
+    };
+    Ok(Spectra {
+        common: of(Mode::Common),
+        differential: of(Mode::Differential),
+        left_out: left_out + single,
+    })
+}
+
+/// Means of all rungs, both sets together, the full rate first, and how many stored spectra are not in them.
+/// Where sample rates differ, the one with most segments is taken, and of each rung the shape with most.
+fn read_ladder(connection: &Connection) -> Result<(Vec<RungMean>, u64), ReportError> {
+    let (mut averages, mut stored) = (RungAverages::new(), 0_u64);
+    let passed_over = spectra::visit(connection, |_, spectra| {
+        stored += 1;
+        averages.add(spectra);
+        Ok::<(), ReportError>(())
+    })?;
+    let sample_rate =
+        |mean: &RungMean| (mean.mean.rate_hz * RUNG_RATIO.powi(mean.mean.rung.into())).to_bits();
+    let mut by_rate: BTreeMap<u64, (u64, BTreeMap<u8, RungMean>)> = BTreeMap::new();
+    for mean in averages.both_sets() {
+        let (segments, rungs) = by_rate.entry(sample_rate(&mean)).or_default();
+        *segments += mean.mean.segments;
+        let is_better = |old: &RungMean| old.mean.segments >= mean.mean.segments;
+        if !rungs.get(&mean.mean.rung).is_some_and(is_better) {
+            rungs.insert(mean.mean.rung, mean);
+        }
+    }
+    let best = by_rate.into_values().max_by_key(|(segments, _)| *segments);
+    let rungs: Vec<RungMean> = best.map(|(_, rungs)| rungs.into_values().collect()).unwrap_or_default();
+    let used: u64 = rungs.iter().map(|rung| rung.spectra).sum();
+    Ok((rungs, stored + passed_over - used))
+}
 
 /// Spectra of one shape: rate and points per segment, then mode.
 type Shape = (u64, u32);
 
 #[derive(Default)]
 struct Shaped {
-    /// Common, then differential.
+    /// Common, then differential; with the segments passed over.
     modes: [Option<(SpectrumAverage, u64)>; 2],
     spectra: u64,
     segments: u64,
 }
 
-/// Averages all spectra of rung 0. Where shapes differ, the one with most segments is taken.
-pub(crate) fn read(connection: &Connection, runs: &[Run]) -> Result<Spectra, ReportError> {
+/// Averages the spectra of single modes, at rung 0. Where shapes differ, the one with most segments is taken.
+fn read_single(connection: &Connection, runs: &[Run]) -> Result<Spectra, ReportError> {
     let table = PowerTable::new();
     let mut shapes: BTreeMap<Shape, Shaped> = BTreeMap::new();
     let (mut stored, mut last_run) = (0_u64, None);
@@ -58,38 +165,125 @@ pub(crate) fn read(connection: &Connection, runs: &[Run]) -> Result<Spectra, Rep
     let Some(best) = shapes.into_values().max_by_key(|shaped| shaped.segments) else {
         return Ok(Spectra { common: None, differential: None, left_out: stored });
     };
+    let of = |mode: &Option<(SpectrumAverage, u64)>| {
+        let (average, skipped) = mode.as_ref()?;
+        let density = average.density()?;
+        let published = 0..density.v2_per_hz.len();
+        mode_spectrum(&[Band { rung: 0, density, published, spectra: average.spectra(), skipped: *skipped }])
+    };
     let [common, differential] = &best.modes;
-    Ok(Spectra {
-        common: common.as_ref().and_then(mode_spectrum),
-        differential: differential.as_ref().and_then(mode_spectrum),
-        left_out: stored - best.spectra,
-    })
+    Ok(Spectra { common: of(common), differential: of(differential), left_out: stored - best.spectra })
 }
 
-fn mode_spectrum((average, skipped): &(SpectrumAverage, u64)) -> Option<ModeSpectrum> {
-    let density = average.density()?;
-    let (unresolved_below_hz, unresolved_rms_v) = density.low_frequency_rest();
+/// The spectrum of one mode from its rungs, the highest rate first; `None` when there are none.
+fn mode_spectrum(bands: &[Band]) -> Option<ModeSpectrum> {
+    let (first, last) = (bands.first()?, bands.last()?);
+    let crossovers = crossovers_hz(bands);
+    let (unresolved_below_hz, unresolved_rms_v) = last.low_frequency_rest();
     Some(ModeSpectrum {
-        spectra: average.spectra(),
-        segments: average.segments(),
-        skipped_segments: *skipped,
-        points: density.points,
-        bin_hz: density.bin_hz(),
-        noise_bandwidth_hz: HANN_ENBW_BINS * density.bin_hz(),
-        noise_floor_v_per_rthz: density.noise_floor_v_per_rthz(),
+        spectra: first.spectra,
+        segments: first.density.segments,
+        skipped_segments: first.skipped,
+        points: first.density.points,
+        bin_hz: first.density.bin_hz(),
+        noise_bandwidth_hz: HANN_ENBW_BINS * first.density.bin_hz(),
+        noise_floor_v_per_rthz: first.noise_floor_v_per_rthz(),
         unresolved_below_hz,
         unresolved_rms_v: rounded_volts(unresolved_rms_v),
-        lines: find(&density, LINES).iter().map(spectral_line).collect(),
+        rungs: bands
+            .iter()
+            .enumerate()
+            .map(|(index, band)| {
+                let from_hz = crossovers.get(index).copied().unwrap_or(0.0).max(band.lowest_hz());
+                let to_hz = index.checked_sub(1).and_then(|index| crossovers.get(index)).copied();
+                rung_spectrum(band, from_hz, to_hz.unwrap_or(f64::INFINITY).min(band.highest_hz()))
+            })
+            .collect(),
+        lines: lines(bands, &crossovers),
     })
 }
 
-fn spectral_line(line: &Line) -> SpectralLine {
+/// Where each rung hands over to the next one below it, Hz: within what both published where they overlap.
+fn crossovers_hz(bands: &[Band]) -> Vec<f64> {
+    bands
+        .windows(2)
+        .filter_map(|pair| {
+            let [higher, lower] = pair else { return None };
+            let crossover = CROSSOVER * lower.density.sample_rate_hz;
+            Some(crossover.max(higher.lowest_hz()).min(lower.highest_hz()))
+        })
+        .collect()
+}
+
+/// A line and where it was found.
+struct Found {
+    line: Line,
+    /// Place in the list of bands.
+    band: usize,
+    /// Whether its maximum may be the skirt of a line beyond the bins published.
+    is_at_end: bool,
+}
+
+/// The strongest lines of all rungs, largest first.
+fn lines(bands: &[Band], crossovers: &[f64]) -> Vec<SpectralLine> {
+    let mut found: Vec<Found> = Vec::new();
+    for (index, band) in bands.iter().enumerate() {
+        let bin_hz = band.density.bin_hz();
+        let from_hz = crossovers.get(index).map_or(0.0, |from| from - NEAR_BINS * bin_hz);
+        // The higher rung and where it takes over.
+        let above = index.checked_sub(1).and_then(|above| bands.get(above).zip(crossovers.get(above)));
+        let to_hz = above.map_or(f64::INFINITY, |(above, to)| to + NEAR_BINS * above.density.bin_hz());
+        let end_hz = if band.published.end < band.density.v2_per_hz.len() {
+            band.highest_hz() - END_BINS * bin_hz
+        } else {
+            f64::INFINITY
+        };
+        for line in find(&band.density, LINES_PER_RUNG) {
+            let at = line.frequency_hz;
+            if at >= from_hz.max(band.lowest_hz() - bin_hz) && at < to_hz.min(band.highest_hz() + bin_hz) {
+                found.push(Found { line, band: index, is_at_end: at > end_hz });
+            }
+        }
+    }
+    // One line told by two neighbouring rungs: the lower one's, whose bins are finer, unless it is at its end.
+    let is_near = |higher: &Found, lower: &Found| {
+        let near_hz = bands.get(higher.band).map_or(0.0, |band| NEAR_BINS * band.density.bin_hz());
+        lower.band == higher.band + 1 && (higher.line.frequency_hz - lower.line.frequency_hz).abs() < near_hz
+    };
+    let is_told_better = |one: &Found| {
+        found
+            .iter()
+            .any(|other| is_near(one, other) && !other.is_at_end || is_near(other, one) && one.is_at_end)
+    };
+    let mut kept: Vec<&Found> = found.iter().filter(|one| !is_told_better(one)).collect();
+    kept.sort_by(|a, b| b.line.amplitude_v.total_cmp(&a.line.amplitude_v));
+    let rung = |one: &Found| bands.get(one.band).map_or(0, |band| band.rung);
+    kept.into_iter().take(LINES).map(|one| spectral_line(&one.line, rung(one))).collect()
+}
+
+fn rung_spectrum(band: &Band, from_hz: f64, to_hz: f64) -> RungSpectrum {
+    RungSpectrum {
+        rung: band.rung,
+        rate_hz: band.density.sample_rate_hz,
+        points: band.density.points,
+        bin_hz: band.density.bin_hz(),
+        from_hz,
+        to_hz,
+        spectra: band.spectra,
+        segments: band.density.segments,
+        skipped_segments: band.skipped,
+        noise_floor_v_per_rthz: band.noise_floor_v_per_rthz(),
+    }
+}
+
+fn spectral_line(line: &Line, rung: u8) -> SpectralLine {
     SpectralLine {
         frequency_hz: line.frequency_hz,
         frequency_uncertainty_hz: line.frequency_uncertainty_hz,
         amplitude_v: rounded_volts(line.amplitude_v),
         rms_v: rounded_volts(line.rms_v),
         above_floor_db: line.above_floor_db,
+        rung,
         method: match line.method {
             LineMethod::Interpolated => "interpolated",
             LineMethod::BandPower => "band-power",

@@ -8,6 +8,7 @@ use legwise_protocol::message::Totals;
 use legwise_protocol::receivers::ReceiverId;
 
 pub(crate) mod fixture;
+mod lines;
 mod long;
 mod schema;
 

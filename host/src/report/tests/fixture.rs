@@ -3,11 +3,13 @@
 use crate::log::{About, Log, Origin};
 use crate::report::{Options, Report};
 use jiff::tz::{Offset, TimeZone};
+use legwise_protocol::cross::BinCodes;
 use legwise_protocol::limits::{Limit, LimitMask, LimitSet};
 use legwise_protocol::message::{Detection, Extremes, LegScale, Moment, Reporting, Settings, Totals};
 use legwise_protocol::power;
 use legwise_protocol::receivers::{ReceiverId, by_id};
 use rusqlite::params;
+use std::f64::consts::PI;
 
 /// Pairs per second of all example runs.
 pub const RATE_HZ: f64 = 500_000.0;
@@ -262,6 +264,17 @@ impl Fixture {
         );
     }
 
+    /// Spectra of the ladder: `rung`, 1024 points, densities of both modes from `first_bin` on, no cross density.
+    pub fn spectra(&self, set: &str, (rung, first_bin): (u8, i64), modes: [&[f64]; 2], segments: i64) {
+        let bins = modes[0].iter().zip(modes[1]);
+        let codes: Vec<u8> =
+            bins.flat_map(|(&c, &d)| BinCodes::encode(c as f32, d as f32, (0.0, 0.0)).to_bytes()).collect();
+        self.sql(
+            "INSERT INTO spectra VALUES (1, 0, 819200, ?1, ?2, 1024, ?3, 0, 7, ?4, ?5)",
+            params![set, rung, segments, first_bin, codes],
+        );
+    }
+
     pub fn report(&self) -> Report {
         Report::from_log(&self.log, &options(10_000)).unwrap()
     }
@@ -278,12 +291,31 @@ fn legs_json() -> String {
 
 /// Power density of a floor and a tone of `amplitude_v` on `bin`: the three bins of the Hann window.
 pub fn tone_density(floor: f64, bin: usize, amplitude_v: f64) -> Vec<f64> {
-    let on_bin = amplitude_v * amplitude_v / 2.0 * 1024.0 / (1.5 * RATE_HZ);
+    rung_density(0, floor, bin, amplitude_v)
+}
+
+/// The same at a rung of the ladder.
+pub fn rung_density(rung: u8, floor: f64, bin: usize, amplitude_v: f64) -> Vec<f64> {
+    let rate_hz = RATE_HZ / 8_f64.powi(rung.into());
+    let on_bin = amplitude_v * amplitude_v / 2.0 * 1024.0 / (1.5 * rate_hz);
     let mut density = vec![floor; 513];
     for (offset, share) in [(0, 0.25), (1, 1.0), (2, 0.25)] {
         density[bin - 1 + offset] += share * on_bin;
     }
     density
+}
+
+/// Power density of a floor and a line of `amplitude_v` anywhere: the Hann line shape
+/// sinc(d)/(1 - d²) (Harris 1978) in every bin, so side lobes too.
+pub fn hann_line(rung: u8, floor: f64, frequency_hz: f64, amplitude_v: f64) -> Vec<f64> {
+    let bin_hz = RATE_HZ / 8_f64.powi(rung.into()) / 1024.0;
+    let peak = amplitude_v * amplitude_v / 2.0 / (1.5 * bin_hz);
+    let shape = |bin: usize| {
+        let d = bin as f64 - frequency_hz / bin_hz;
+        let sinc = if d == 0.0 { 1.0 } else { (PI * d).sin() / (PI * d) };
+        if (d.abs() - 1.0).abs() < 1e-9 { 0.5 } else { sinc / (1.0 - d * d) }
+    };
+    (0..513).map(|bin| floor + peak * shape(bin).powi(2)).collect()
 }
 
 /// A night on an RS-485 pair with a bit of everything in it: two starts, excursions whole and in

@@ -218,7 +218,7 @@ pub(super) fn lines(report: &Report) -> String {
     }
     if spectrum.left_out > 0 {
         let value = figures::counted(spectrum.left_out, "spectrum", "spectra");
-        text.push_str(&labelled("left out", &format!("{value} of another rate or length")));
+        text.push_str(&labelled("left out", &format!("{value} of another rate, length or kind")));
     }
     text
 }
@@ -262,16 +262,35 @@ fn mode_lines(name: &str, mode: &ModeSpectrum) -> String {
         ];
         text.push_str(&table(&columns, &rows));
     }
-    let overlap = if mode.skipped_segments == 0 { "50 % overlap" } else { "some segments passed over" };
-    text.push_str(&paragraph(&format!(
-        "Hann window, {} points, {} in {} averaged, {overlap}; bins {} apart, noise bandwidth {}; not confirmed \
-         against aliases.",
-        mode.points,
-        figures::counted(mode.segments, "segment", "segments"),
-        figures::counted(mode.spectra, "spectrum", "spectra"),
-        figures::hertz(mode.bin_hz),
-        figures::hertz(mode.noise_bandwidth_hz),
-    )));
+    let averaged = |spectra, segments, skipped| {
+        format!(
+            "{} in {} averaged, {}",
+            figures::counted(segments, "segment", "segments"),
+            figures::counted(spectra, "spectrum", "spectra"),
+            if skipped == 0 { "50 % overlap" } else { "some segments passed over" },
+        )
+    };
+    let how = if mode.rungs.len() > 1 {
+        let rungs = mode.rungs.iter().rev().map(|rung| {
+            format!(
+                "{} to {}: bins {} apart, {}",
+                figures::hertz(rung.from_hz),
+                figures::hertz(rung.to_hz),
+                figures::hertz(rung.bin_hz),
+                averaged(rung.spectra, rung.segments, rung.skipped_segments)
+            )
+        });
+        format!("Hann window, {} points. {}", mode.points, rungs.collect::<Vec<_>>().join("; "))
+    } else {
+        format!(
+            "Hann window, {} points, {}; bins {} apart, noise bandwidth {}",
+            mode.points,
+            averaged(mode.spectra, mode.segments, mode.skipped_segments),
+            figures::hertz(mode.bin_hz),
+            figures::hertz(mode.noise_bandwidth_hz),
+        )
+    };
+    text.push_str(&paragraph(&format!("{how}; not confirmed against aliases.")));
     text
 }
 
