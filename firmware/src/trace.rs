@@ -43,6 +43,7 @@ pub(crate) fn record(message: &Message, sample: u64) {
         | Message::Snippet(_)
         | Message::Levels(_)
         | Message::Spectrum(_)
+        | Message::Spectra(_)
         | Message::Totals(_)
         | Message::Loss(_)
         | Message::Reply(_) => {}

@@ -14,6 +14,7 @@
 use legwise_protocol::power;
 
 pub mod average;
+pub mod conversion;
 pub mod lines;
 pub mod rung;
 
