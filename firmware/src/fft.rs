@@ -6,7 +6,7 @@
 //! two passes work in place, and the last one deals out the result: no second buffer, no permutation.
 //!
 //! * Sign: `X[k] = Σ x[n] exp(−j 2π k n / N)`, not normalised.
-//! * Output in pairs X[k], X[N−k], as two real signals in one transform need it.
+//! * Output in pairs `X[k]`, `X[N−k]`, as two real signals in one transform need it.
 //! * Point n = 128 r + 16 s + 4 t + u, bin k = d + 8e + 64f + 256g (digits r, s, d, e below 8, the others
 //!   below 4). The passes replace r by d, s by e, t by f, u by g. What belongs to column r, s, t, u lies
 //!   at 256 t + 32 s + 4 r + u: before the last pass the four terms of bin k are neighbours, in the
@@ -86,7 +86,7 @@ pub const fn place(bin: usize) -> usize {
 }
 
 /// Transforms what `column` gives for n < N/8: sums and differences of the points n + row N/8 and
-/// n + (row + 4) N/8 for row = 0 .. 3. Every bin k, at its [`place`], takes X[k] and X[N−k]. `work` may
+/// n + (row + 4) N/8 for row = 0 .. 3. Every bin k, at its [`place`], takes `X[k]` and `X[N−k]`. `work` may
 /// hold anything before and holds nothing of use after.
 #[inline(always)]
 pub fn transform<T>(
