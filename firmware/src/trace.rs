@@ -38,6 +38,7 @@ pub(crate) fn record(message: &Message, sample: u64) {
         Message::Storm(storm) => say!(warn, "sample {}: storm: {}", sample, storm),
         Message::Gap(gap) => say!(warn, "sample {}: gap: {}", sample, gap),
         Message::End(end) => say!(info, "sample {}: end: {}", sample, end.cause),
+        Message::Rate(change) => say!(info, "sample {}: rate {}", sample, change),
         Message::Hello(_)
         | Message::Summary(_)
         | Message::Snippet(_)

@@ -27,4 +27,4 @@ pub mod units;
 /// Version of the wire format: the first number of every [`message::Hello`].
 ///
 /// Raised when a message or command is appended; the change list is in `WIRE.md`.
-pub const WIRE_VERSION: u16 = 2;
+pub const WIRE_VERSION: u16 = 3;

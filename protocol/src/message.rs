@@ -47,6 +47,8 @@ pub enum Message {
     End(End),
     /// Part of the averaged spectra of one rung: both modes and their cross density. Since version 2.
     Spectra(SpectraPart),
+    /// The source takes pairs at another rate from some pair on. Since version 3.
+    Rate(RateChange),
 }
 
 /// Who speaks.
@@ -178,7 +180,8 @@ pub struct Reporting {
     pub summary_samples: u32,
     /// Pairs per [`Levels`] and [`Totals`].
     pub levels_samples: u32,
-    /// Segments averaged into one spectrum; 0 turns spectra off.
+    /// Segments of the full rate that go by, averaged or passed over, until its average is sent; 0 turns
+    /// spectra off.
     pub spectrum_segments: u32,
     /// Segments skipped after each one transformed (0 = every segment at 50 % overlap).
     pub spectrum_skip: u16,
@@ -426,6 +429,17 @@ pub enum SegmentSet {
     Driven,
 }
 
+/// From pair `first_sample` on pairs are taken at another rate, until the next change. The index goes on:
+/// it counts pairs, not time.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize, MaxSize)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct RateChange {
+    /// The first pair at the new rate.
+    pub first_sample: u64,
+    /// Pairs per second, in millihertz.
+    pub sample_rate_mhz: u64,
+}
+
 /// Part of the averaged spectra of one rung of the decimation ladder and one set of segments.
 ///
 /// One-sided densities in V²/Hz of CM and DM and their cross density `conj(C)·D`; Hann window
@@ -591,6 +605,7 @@ impl Message {
             | Self::Snippet(_)
             | Self::Gap(_)
             | Self::Loss(_)
+            | Self::Rate(_)
             | Self::End(_) => true,
             Self::Hello(_)
             | Self::Summary(_)

@@ -117,6 +117,7 @@ impl LiveView {
             | Message::Levels(_)
             | Message::Spectrum(_)
             | Message::Spectra(_)
+            | Message::Rate(_)
             | Message::Reply(_) => None,
         }
     }

@@ -2,17 +2,17 @@
 //!
 //! Each row of `clock` is an arrival: `utc = offset + sample / rate + delay`, delay never negative.
 //! The row with the smallest `utc - sample / rate` was delayed least; it anchors the run, and the
-//! nominal rate carries from there. That is the touching point of the lower envelope of arrivals
+//! nominal rate carries from there (or, stretch by stretch, the rates the device says it went over to,
+//! [`super::rate`]). That is the touching point of the lower envelope of arrivals
 //! (Zhang, Liu and Xia, *Clock synchronization algorithms for network measurements*, INFOCOM 2002);
 //! its slope, the error of the device's crystal, is not fitted but shown as uncertainty: how far the
 //! least offsets of the first and the last quarter of the run lie apart, times 4/3, because a steady
 //! drift moves these two by three quarters of what it adds up to. The shortest delay itself cannot
 //! be seen one-way and stays in the result.
 
-use super::store::ns_of;
+use super::rate::Rates;
 use super::{Log, LogError};
 use jiff::Timestamp;
-use rusqlite::OptionalExtension;
 
 /// Least uncertainty claimed: the one-way delay that no fit can see, over USB. A serial bridge with
 /// a latency timer has up to 20 ms, which shows as spread only in part (common practice, no source).
@@ -28,10 +28,10 @@ pub struct Instant {
 }
 
 /// Counter to UTC for one run.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[derive(Clone, Debug, PartialEq, Eq)]
 pub struct RunClock {
     offset_ns: i128,
-    sample_rate_mhz: u64,
+    rates: Rates,
     uncertainty_ns: i64,
 }
 
@@ -42,38 +42,30 @@ impl RunClock {
     /// When the log cannot be read.
     pub fn load(log: &Log, run: i64) -> Result<Option<Self>, LogError> {
         let connection = log.connection();
-        let rate = connection
-            .prepare_cached("SELECT sample_rate_mhz FROM run WHERE run = ?")?
-            .query_row([run], |row| row.get::<_, Option<i64>>(0))
-            .optional()?
-            .flatten();
-        let Some(sample_rate_mhz) = rate.and_then(|rate| u64::try_from(rate).ok()).filter(|&rate| rate > 0)
-        else {
-            return Ok(None);
-        };
+        let Some(rates) = Rates::load(connection, run)? else { return Ok(None) };
         let mut statement =
             connection.prepare_cached("SELECT sample, utc_ns FROM clock WHERE run = ? ORDER BY sample")?;
         let offset = |row: &rusqlite::Row<'_>| {
             let (sample, utc_ns): (i64, i64) = (row.get(0)?, row.get(1)?);
-            Ok(i128::from(utc_ns) - ns_of(u64::try_from(sample).unwrap_or(0), sample_rate_mhz))
+            Ok(i128::from(utc_ns) - rates.elapsed_ns(u64::try_from(sample).unwrap_or(0)))
         };
         let offsets: Vec<i128> = statement.query_map([run], offset)?.collect::<Result<_, _>>()?;
-        Ok(Self::fit(&offsets, sample_rate_mhz))
+        Ok(Self::fit(&offsets, rates))
     }
 
     /// From offsets `utc - sample / rate` in order of samples.
-    fn fit(offsets_ns: &[i128], sample_rate_mhz: u64) -> Option<Self> {
+    fn fit(offsets_ns: &[i128], rates: Rates) -> Option<Self> {
         let offset_ns = *offsets_ns.iter().min()?;
         let quarter = offsets_ns.len().div_ceil(4);
         let first = *offsets_ns.iter().take(quarter).min()?;
         let last = *offsets_ns.iter().rev().take(quarter).min()?;
         let spread = i64::try_from((first - last).abs() * 4 / 3).unwrap_or(i64::MAX);
-        Some(Self { offset_ns, sample_rate_mhz, uncertainty_ns: spread.max(LEAST_UNCERTAINTY_NS) })
+        Some(Self { offset_ns, rates, uncertainty_ns: spread.max(LEAST_UNCERTAINTY_NS) })
     }
 
     /// When `sample` was taken.
     pub fn at(&self, sample: u64) -> Instant {
-        let utc_ns = self.offset_ns + ns_of(sample, self.sample_rate_mhz);
+        let utc_ns = self.offset_ns + self.rates.elapsed_ns(sample);
         let utc_ns = i64::try_from(utc_ns).unwrap_or(i64::MAX);
         Instant { utc_ns, uncertainty_ns: self.uncertainty_ns }
     }
@@ -91,7 +83,9 @@ mod tests {
     use super::*;
 
     const NOON_NS: i64 = 1_700_000_000_000_000_000;
-    const RATE_MHZ: u64 = 500_000_000;
+    fn rates() -> Rates {
+        Rates::new(500_000_000, [])
+    }
 
     /// Offsets of an arrival per second, delayed by 0.2 ms plus a saw-tooth of up to 16 ms (a serial
     /// bridge's latency timer), on a crystal that is `ppm` slow.
@@ -103,7 +97,7 @@ mod tests {
 
     #[test]
     fn the_least_delayed_arrival_anchors_the_run() {
-        let clock = RunClock::fit(&offsets(3600, 0.0), RATE_MHZ).unwrap();
+        let clock = RunClock::fit(&offsets(3600, 0.0), rates()).unwrap();
         // One hour at 500 kS/s.
         let instant = clock.at(1_800_000_000);
         assert_eq!(instant.utc_ns, NOON_NS + 3_600_000_000_000 + 200_000);
@@ -113,7 +107,7 @@ mod tests {
     #[test]
     fn a_slow_crystal_shows_as_uncertainty_that_holds_the_truth() {
         for ppm in [-50.0, 50.0] {
-            let clock = RunClock::fit(&offsets(28_800, ppm), RATE_MHZ).unwrap();
+            let clock = RunClock::fit(&offsets(28_800, ppm), rates()).unwrap();
             let mut worst_ns = 0;
             for half_hour in 0..16_i64 {
                 let second = half_hour * 1800 + 1799;
@@ -131,8 +125,8 @@ mod tests {
 
     #[test]
     fn one_pair_is_enough_and_none_is_no_clock() {
-        assert_eq!(RunClock::fit(&[], RATE_MHZ), None);
-        assert_eq!(RunClock::fit(&[5], RATE_MHZ).map(|clock| clock.at(500_000).utc_ns), Some(1_000_000_005));
+        assert_eq!(RunClock::fit(&[], rates()), None);
+        assert_eq!(RunClock::fit(&[5], rates()).map(|clock| clock.at(500_000).utc_ns), Some(1_000_000_005));
     }
 
     #[test]

@@ -266,6 +266,7 @@ pub(crate) fn one_of_each() -> Vec<Message> {
         Message::Totals(totals(72)),
         Message::Loss(Loss { snippet_parts: 111, records: 112 }),
         Message::Reply(Reply { to: 121, outcome: Outcome::Unsupported }),
+        Message::Rate(RateChange { first_sample: 1 << 40, sample_rate_mhz: 131 }),
         Message::End(End { cause: EndCause::Stopped, totals: totals(7200) }),
     ]
 }

@@ -26,6 +26,7 @@ mod file;
 #[cfg(test)]
 pub(crate) mod fixtures;
 mod pending;
+pub mod rate;
 mod rows;
 mod schema;
 pub mod spectra;
@@ -38,7 +39,7 @@ pub(crate) use schema::TABLES;
 pub use store::{Arrival, LinkCounts, Stored};
 
 /// `PRAGMA user_version` of the logs this version writes, and the newest it reads.
-pub const SCHEMA_VERSION: i32 = 2;
+pub const SCHEMA_VERSION: i32 = 3;
 /// `PRAGMA application_id` of every log: the letters "LGW1".
 pub const APPLICATION_ID: i32 = 0x4C47_5731;
 /// Frames held in memory between two commits, and while nothing can be stored.

@@ -5,8 +5,8 @@
 //! are stored as `i64::MAX`; a sample counter gets there after 292 000 years at 1 MS/s.
 
 use legwise_protocol::message::{
-    EndCause, Excursion, Gap, GapCause, Hello, Levels, Loss, Mode, Part, ResetCause, SegmentSet, Settings,
-    SnippetPart, SpectraPart, SpectrumPart, Storm, Summary, Totals,
+    EndCause, Excursion, Gap, GapCause, Hello, Levels, Loss, Mode, Part, RateChange, ResetCause, SegmentSet,
+    Settings, SnippetPart, SpectraPart, SpectrumPart, Storm, Summary, Totals,
 };
 use legwise_protocol::receivers::{self, ReceiverId};
 use legwise_protocol::units::Span;
@@ -227,6 +227,14 @@ pub(super) fn gap(connection: &Connection, run: i64, number: u32, gap: &Gap) -> 
         connection,
         "INSERT OR IGNORE INTO gap (run, number, first_sample, samples, cause) VALUES (?, ?, ?, ?, ?)",
         params![run, number, int(gap.first_sample), int(gap.samples), gap_cause(gap.cause)],
+    )
+}
+
+pub(super) fn rate(connection: &Connection, run: i64, number: u32, change: &RateChange) -> Result<usize> {
+    execute(
+        connection,
+        "INSERT OR IGNORE INTO rate (run, number, first_sample, sample_rate_mhz) VALUES (?, ?, ?, ?)",
+        params![run, number, int(change.first_sample), int(change.sample_rate_mhz)],
     )
 }
 

@@ -21,12 +21,12 @@ const FORMAT: &str = "legwise log";
 const BUSY_WAIT: Duration = Duration::from_secs(2);
 
 /// The line of `schema.sql` behind which stands what each version after the first brought.
-const SINCE: [(i32, &str); 1] = [(2, "-- Since schema 2.\n")];
+const SINCE: [(i32, &str); 2] = [(2, "-- Since schema 2.\n"), (3, "-- Since schema 3.\n")];
 /// How many of [`TABLES`] a log of schema 1 has, of schema 2, and so on.
-const TABLE_COUNTS: [usize; SCHEMA_VERSION as usize] = [15, 16];
+const TABLE_COUNTS: [usize; SCHEMA_VERSION as usize] = [15, 16, 17];
 
 /// The tables of a log, in the order of `schema.sql`.
-pub(crate) const TABLES: [&str; 16] = [
+pub(crate) const TABLES: [&str; 17] = [
     "info",
     "run",
     "settings",
@@ -43,6 +43,7 @@ pub(crate) const TABLES: [&str; 16] = [
     "link",
     "note",
     "spectra",
+    "rate",
 ];
 
 /// Tables, versions and `info` of a new log, in one transaction.

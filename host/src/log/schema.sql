@@ -1,4 +1,4 @@
--- Legwise log, schema 2. One file holds one night (or one recording). Tables are append-only,
+-- Legwise log, schema 3. One file holds one night (or one recording). Tables are append-only,
 -- except `run`, `totals` and `link`, whose single row per run is replaced by a newer account.
 -- Units are in the names: _uv microvolts, _twice_uv twice the value in microvolts, _samples and
 -- *_sample pair counts and indices, _mhz millihertz, _ns nanoseconds (UTC: since 1970-01-01).
@@ -131,4 +131,13 @@ CREATE TABLE spectra (
   segments INTEGER NOT NULL, skipped INTEGER NOT NULL, other INTEGER NOT NULL,
   first_bin INTEGER NOT NULL, codes BLOB NOT NULL,
   PRIMARY KEY (run, first_sample, rung, segment_set)
+) STRICT, WITHOUT ROWID;
+
+-- Since schema 3.
+-- Changes of the sampling rate: from first_sample on, until the next one. The counter goes on, it counts
+-- pairs.
+CREATE TABLE rate (
+  run INTEGER NOT NULL, number INTEGER NOT NULL,
+  first_sample INTEGER NOT NULL, sample_rate_mhz INTEGER NOT NULL,
+  PRIMARY KEY (run, number)
 ) STRICT, WITHOUT ROWID;

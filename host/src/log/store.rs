@@ -153,6 +153,7 @@ impl Run {
             Message::Storm(storm) => rows::storm(connection, run, number, storm)?,
             Message::Snippet(part) => rows::snippet(connection, run, number, part)?,
             Message::Gap(gap) => rows::gap(connection, run, number, gap)?,
+            Message::Rate(change) => rows::rate(connection, run, number, change)?,
             Message::Loss(loss) => rows::loss(connection, run, loss)?,
             Message::End(end) => rows::totals(connection, run, sample, &end.totals, Some(end.cause))?,
             _ => return self.passing(connection, frame, arrival),

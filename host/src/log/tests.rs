@@ -269,7 +269,7 @@ fn kept_messages_sent_again_change_nothing() {
     log.commit().unwrap();
     let before = dump(&log);
     let kept: Vec<_> = sent.into_iter().filter(|frame| frame.message.is_kept()).collect();
-    assert_eq!(kept.len(), 7);
+    assert_eq!(kept.len(), 8);
     for frame in &kept {
         let stored = log.store(frame, at_ms(15)).unwrap();
         let expected = if matches!(frame.message, Message::End(_)) { Stored::New } else { Stored::Repeated };

@@ -138,7 +138,7 @@ fn logs_of_a_later_version_and_broken_ones_are_refused() {
     let later = rusqlite::Connection::open(room.path("later.lwlog")).unwrap();
     later.pragma_update(None, "user_version", 99).unwrap();
     drop(later);
-    refuse(&room, &["report", "later.lwlog"], INPUT, "it has schema 99, this version knows up to 2");
+    refuse(&room, &["report", "later.lwlog"], INPUT, "it has schema 99, this version knows up to 3");
     room.write("cut.lwlog", &log[..log.len() / 2]);
     refuse(&room, &["report", "cut.lwlog"], INPUT, "damaged");
     let mut torn = log.clone();

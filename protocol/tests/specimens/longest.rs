@@ -146,6 +146,7 @@ pub fn longest_messages() -> Vec<Message> {
             first_bin: u16::MAX,
             codes: payload,
         }),
+        Message::Rate(RateChange { first_sample: u64::MAX, sample_rate_mhz: u64::MAX }),
     ]
 }
 

@@ -235,6 +235,7 @@ pub fn device_frames() -> Vec<(&'static str, DeviceFrame)> {
     let gap = Gap { first_sample: 900_000, samples: 1_024, cause: GapCause::Overrun };
     let reply = Reply { to: 70_000, outcome: Outcome::OutOfRange };
     let end = End { cause: EndCause::Stopped, totals: totals() };
+    let rate = RateChange { first_sample: 30_000_128, sample_rate_mhz: 512_820_512 };
     [
         ("Hello", passing(0, 0), Message::Hello(hello())),
         ("Settings", kept(1, 0, 1), Message::Settings(settings)),
@@ -250,6 +251,7 @@ pub fn device_frames() -> Vec<(&'static str, DeviceFrame)> {
         ("Reply", passing(u32::MAX, u64::MAX), Message::Reply(reply)),
         ("End", kept(0, 21_600_001_280, 304), Message::End(end)),
         ("Spectra", passing(129, 820_224), Message::Spectra(spectra())),
+        ("Rate", kept(131, 30_000_128, 305), Message::Rate(rate)),
         ("Settings that judge nothing", kept(1, 0, 1), Message::Settings(unjudged)),
         ("Summary of nothing", passing(9, 5), Message::Summary(Summary::default())),
     ]

@@ -235,7 +235,7 @@ fn a_log_of_schema_1_reads_as_it_did_and_lacks_what_is_new() {
     let sent: Vec<_> = [BOOT, BOOT + 1]
         .into_iter()
         .flat_map(|boot| {
-            let is_old = |message: &Message| !matches!(message, Message::Spectra(_));
+            let is_old = |message: &Message| !matches!(message, Message::Spectra(_) | Message::Rate(_));
             frames(boot, one_of_each().into_iter().filter(is_old))
         })
         .collect();
