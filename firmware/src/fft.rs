@@ -62,11 +62,11 @@ const fn powers<const COUNT: usize, const LENGTH: usize>(whole: usize) -> [[Comp
     table
 }
 
-/// Sine and cosine of n/N of a turn, n < N/8.
+/// Cosine and sine of n/N of a turn, n < N/8.
 #[inline(always)]
-pub(crate) fn sine_cosine(n: usize) -> (f32, f32) {
+pub(crate) fn root(n: usize) -> Complex {
     let [root, ..] = FINE[n % COLUMNS];
-    (-root.im, root.re)
+    root.conjugate()
 }
 
 /// Factors for k < N/4.
@@ -80,20 +80,14 @@ fn fine(k: usize) -> [Complex; 3] {
     [Complex { re: -w1.im, im: -w1.re }, Complex { re: -w2.re, im: w2.im }, Complex { re: w3.im, im: w3.re }]
 }
 
-/// Where a bin is after [`transform`].
-pub const fn place(bin: usize) -> usize {
-    if bin < POINTS / 2 { bin % QUARTER * 2 + bin / QUARTER } else { bin }
-}
-
 /// Transforms what `column` gives for n < N/8: sums and differences of the points n + row N/8 and
-/// n + (row + 4) N/8 for row = 0 .. 3. Every bin k, at its [`place`], takes `X[k]` and `X[N−k]`. `work` may
-/// hold anything before and holds nothing of use after.
+/// n + (row + 4) N/8 for row = 0 .. 3. `take` gets every bin k from 0 to N/2, in some order, with `X[k]` and
+/// `X[N−k]`. `work` may hold anything before and holds nothing of use after.
 #[inline(always)]
-pub fn transform<T>(
+pub fn transform(
     work: &mut Complexes,
     column: impl Fn(usize) -> [(Complex, Complex); 4],
-    bins: &mut [T; BINS],
-    take: impl Fn(&mut T, Complex, Complex),
+    take: impl FnMut(usize, Complex, Complex),
 ) {
     first_pass(work, column);
     // Twice four rows of 32, four times; then four rows of 64 times 4.
@@ -103,7 +97,7 @@ pub fn transform<T>(
     if let [r0, r1, r2, r3] = work.as_chunks_mut().0.as_chunks_mut().0 {
         combine_4(r0, r1, r2, r3);
     }
-    last_pass(work, bins, take);
+    last_pass(work, take);
 }
 
 // None of the passes is inlined: where the compiler sees that rows are parts of one buffer it addresses
@@ -152,27 +146,25 @@ fn combine_4(r0: &mut Row, r1: &mut Row, r2: &mut Row, r3: &mut Row) {
 
 /// Combines four transforms of 256 points, columns k and N/4−k together.
 #[inline(never)]
-fn last_pass<T>(work: &Complexes, bins: &mut [T; BINS], take: impl Fn(&mut T, Complex, Complex)) {
+fn last_pass(work: &Complexes, mut take: impl FnMut(usize, Complex, Complex)) {
     const MIDDLE: usize = COLUMNS;
-    let (bins, [top]) = bins.as_chunks_mut::<2>() else { return };
-    let (blocks, bins) = (work.as_chunks::<4>().0.as_array::<QUARTER>(), bins.as_mut_array::<QUARTER>());
-    let (Some(blocks), Some(bins)) = (blocks, bins) else { return };
+    let Some(blocks) = work.as_chunks::<4>().0.as_array::<QUARTER>() else { return };
     let [x0, x1, x2, x3] = butterfly_4(blocks[0]);
-    take(&mut bins[0][0], x0, x0);
-    take(&mut bins[0][1], x1, x3);
-    take(top, x2, x2);
+    take(0, x0, x0);
+    take(QUARTER, x1, x3);
+    take(2 * QUARTER, x2, x2);
     for k in 1..MIDDLE {
         let (mirror, factors) = (QUARTER - k, FINE[k]);
         let [x0, x1, x2, x3] = twisted_4(blocks[k], factors);
         let [y3, y0, y1, y2] = twisted_4(blocks[mirror], factors.map(Complex::conjugate));
-        take(&mut bins[k][0], x0, y3);
-        take(&mut bins[mirror][1], y1, x2);
-        take(&mut bins[mirror][0], y0, x3);
-        take(&mut bins[k][1], x1, y2);
+        take(k, x0, y3);
+        take(mirror + QUARTER, y1, x2);
+        take(mirror, y0, x3);
+        take(k + QUARTER, x1, y2);
     }
     let [x0, x1, x2, x3] = twisted_4(blocks[MIDDLE], FINE[MIDDLE]);
-    take(&mut bins[MIDDLE][0], x0, x3);
-    take(&mut bins[MIDDLE][1], x1, x2);
+    take(MIDDLE, x0, x3);
+    take(MIDDLE + QUARTER, x1, x2);
 }
 
 /// Four points, the factors of all but the first, and their transform.
@@ -248,11 +240,14 @@ mod tests {
 
     /// The whole output in natural order; the transform's working space is dirty before.
     fn transformed(data: &Complexes, dirt: &Complexes) -> Complexes {
-        let (mut work, mut bins) = (*dirt, [(Complex::ZERO, Complex::ZERO); BINS]);
+        let (mut work, mut result) = (*dirt, [Complex::ZERO; POINTS]);
         let point = |n: usize, row: usize| data[n + COLUMNS * row];
         let column = |n| core::array::from_fn(|row| point(n, row).sum_and_difference(point(n, row + 4)));
-        transform(&mut work, column, &mut bins, |bin, x, mirror| *bin = (x, mirror));
-        core::array::from_fn(|k| if k < BINS { bins[place(k)].0 } else { bins[place(POINTS - k)].1 })
+        transform(&mut work, column, |bin, x, mirror| {
+            result[(POINTS - bin) % POINTS] = mirror;
+            result[bin] = x;
+        });
+        result
     }
 
     fn reference(data: &Complexes) -> std::vec::Vec<Complex64> {

@@ -2,27 +2,27 @@
 //!
 //! A bus has three states, not two: driven high, driven low, and resting at its bias level between
 //! messages. Levels are modes of a fixed-range histogram (after the histogram method of IEEE Std 181,
-//! with the resting state kept apart), refined by the mean of the five bins around the mode. Means of
+//! with the resting state kept apart), refined by the mean of the three bins around the mode. Means of
 //! whole classes are pulled tens of millivolts by edge samples; modes are not.
 //!
-//! Each bin holds a count and the sum of its samples' offsets within the bin (in steps of 16 µV), so
-//! a refined level is good to 16 µV however coarse the bins. The common mode is summed per state over
+//! Each bin holds a count and the sum of its samples' offsets within the bin (in steps of 32 µV), so
+//! a refined level is good to 32 µV however coarse the bins. The common mode is summed per state over
 //! *settled* samples: those whose predecessor was in the same state.
 
 use crate::block::Block;
 use crate::interval::Interval;
 use legwise_protocol::message::{Level, Levels, Plateau};
 
-const BINS: usize = 1024;
-/// Bin width as a power of two: 16.384 mV, ±8.39 V in all.
-const BIN_SHIFT: u32 = 14;
-/// Steps of the offset within a bin: 2^4 µV.
-const OFFSET_SHIFT: u32 = 4;
+const BINS: usize = 512;
+/// Bin width as a power of two: 32.768 mV, ±8.39 V in all.
+const BIN_SHIFT: u32 = 15;
+/// Steps of the offset within a bin: 2^5 µV.
+const OFFSET_SHIFT: u32 = 5;
 /// Range of the histogram; what lies beyond counts in the outermost bins.
 const RANGE_UV: i32 = (BINS as i32 / 2) << BIN_SHIFT;
 const OFFSET_MASK: i32 = (1 << BIN_SHIFT) - 1;
 /// Bins either side of the mode that belong to a level.
-const AROUND: usize = 2;
+const AROUND: usize = 1;
 /// Bins either side of the resting level that its noise may reach: 0.1 V.
 const SKIRT: usize = 3 * AROUND;
 /// Two levels are told apart from 0.4 V on.
@@ -51,7 +51,7 @@ const LOW: usize = 2;
 struct Bin {
     /// Samples.
     count: u32,
-    /// Sum of their offsets within the bin, in steps of 16 µV.
+    /// Sum of their offsets within the bin, in steps of 32 µV.
     offset: u32,
 }
 
@@ -62,6 +62,8 @@ pub struct LevelMeter {
     samples: u32,
     bins: [Bin; BINS],
     state: usize,
+    /// The resting level last found.
+    rest_uv: i32,
     settled: [u32; 3],
     twice_cm_sums: [i64; 3],
 }
@@ -80,6 +82,7 @@ impl LevelMeter {
             samples: 0,
             bins: [Bin { count: 0, offset: 0 }; BINS],
             state: IDLE,
+            rest_uv: 0,
             settled: [0; 3],
             twice_cm_sums: [0; 3],
         }
@@ -91,6 +94,7 @@ impl LevelMeter {
         self.samples = 0;
         self.bins.fill(Bin { count: 0, offset: 0 });
         self.state = IDLE;
+        self.rest_uv = 0;
         self.settled = [0; 3];
         self.twice_cm_sums = [0; 3];
     }
@@ -98,6 +102,11 @@ impl LevelMeter {
     /// Samples in the interval so far.
     pub const fn samples(&self) -> u32 {
         self.samples
+    }
+
+    /// The resting level last found, microvolts; 0 before.
+    pub const fn rest_uv(&self) -> i32 {
+        self.rest_uv
     }
 
     /// Takes a block; |DM| up to `idle_below_uv` is the resting state.
@@ -152,9 +161,9 @@ impl LevelMeter {
     /// The levels of the interval, and a fresh start.
     pub fn finish(&mut self, idle_below_uv: u32) -> Levels {
         let levels = self.evaluate(idle_below_uv);
-        let state = self.state;
+        let (state, rest_uv) = (self.state, levels.idle.map_or(self.rest_uv, |idle| idle.dm_uv));
         self.restart();
-        self.state = state;
+        (self.state, self.rest_uv) = (state, rest_uv);
         levels
     }
 
@@ -244,8 +253,8 @@ impl LevelMeter {
             total += i64::from(count) * base + (i64::from(offset) << OFFSET_SHIFT);
             held += i64::from(count);
         }
-        // Offsets were cut to 16 µV: on average 7.5 µV too low.
-        let mean = total.checked_div_euclid(held).unwrap_or(0) + 7;
+        // Offsets were cut to 32 µV: on average 15.5 µV too low.
+        let mean = total.checked_div_euclid(held).unwrap_or(0) + 15;
         Level { dm_uv: mean.clamp(i64::from(i32::MIN), i64::from(i32::MAX)) as i32, samples: mode.held }
     }
 
@@ -290,7 +299,7 @@ const fn range_of(state: usize, threshold: i32) -> Interval {
     }
 }
 
-/// A bin and the samples within two bins of it.
+/// A bin and the samples within a bin of it.
 #[derive(Clone, Copy, Debug)]
 struct Mode {
     bin: usize,

@@ -22,6 +22,7 @@ pub mod alignment;
 pub mod block;
 pub mod calibration;
 pub mod converters;
+pub mod dither;
 pub mod extremes;
 pub mod fakes;
 pub mod fft;

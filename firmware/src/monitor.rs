@@ -4,6 +4,7 @@
 
 use crate::alarm::AlarmPin;
 use crate::block::BLOCK_PAIRS;
+use crate::dither::Schedule;
 use crate::link::Link;
 use crate::outbox::Outbox;
 use crate::pipeline::{Buffers, Pipeline};
@@ -118,8 +119,13 @@ pub struct Monitor<S, L, P, B, M> {
     frame_length: usize,
     frame_sent: usize,
     has_obeyed: bool,
+    dither: Schedule,
+    /// Passing messages shed that the pipeline has been told of.
+    told_shed: u32,
     /// Whether the first step has been made.
     is_introduced: bool,
+    /// Why the pipeline is to end once its averages have been sent.
+    ending: Option<EndCause>,
     is_stopped: bool,
     /// Whether pairs were passed over on request since the last one that was examined.
     has_passed_over: bool,
@@ -158,7 +164,10 @@ where
             frame_length: 1,
             frame_sent: 0,
             has_obeyed: false,
+            dither: Schedule::new(description.sample_rate_mhz),
+            told_shed: 0,
             is_introduced: false,
+            ending: None,
             is_stopped: false,
             has_passed_over: false,
             is_ended: false,
@@ -208,7 +217,11 @@ where
         let has_sent = self.send().map_err(StepError::Link)?;
         Ok(if has_received || has_sampled || has_sent {
             Step::Worked
-        } else if self.is_ended && self.memory.outbox.is_sent() && self.frame_sent == self.frame_length {
+        } else if self.is_ended
+            && self.ending.is_none()
+            && self.memory.outbox.is_sent()
+            && self.frame_sent == self.frame_length
+        {
             Step::Finished
         } else {
             Step::Waiting
@@ -217,15 +230,16 @@ where
 
     /// Takes samples if there are any; `true` when something was done.
     fn sample(&mut self) -> StepResult<bool, S, L, P> {
+        let has_sent = self.ending.is_some() && self.wind_up();
         if self.is_ended {
-            return Ok(false);
+            return Ok(has_sent);
         }
         let Self { pipeline, memory, .. } = self;
         let Memory { outbox, code_a, code_b, .. } = &mut **memory;
         let taken = self.source.take(code_a, code_b).map_err(StepError::Source)?;
         let records = &mut |message: &Message, sample: u64| outbox.record(message, sample);
         match taken {
-            Taken::Nothing => return Ok(false),
+            Taken::Nothing => return Ok(has_sent),
             Taken::Pairs { first_sample, pairs, .. } if self.is_stopped => {
                 self.has_passed_over = true;
                 let is_outside = self.pipeline.take_alarm();
@@ -243,17 +257,50 @@ where
                     pipeline.gap(first_sample, 0, cause, records);
                 }
                 pipeline.take(first_sample, code_a, code_b, cause, records);
+                self.look_around();
             }
             Taken::Finished => {
                 self.is_ended = true;
                 if !self.is_stopped {
-                    pipeline.end(EndCause::SourceExhausted, records);
+                    self.ending = Some(EndCause::SourceExhausted);
                 }
             }
         }
         let is_outside = self.pipeline.take_alarm();
         self.alarm.follow(is_outside, self.pipeline.next_sample()).map_err(StepError::Pin)?;
         Ok(true)
+    }
+
+    /// After some pairs: what the link had to shed makes spectra fewer, and the rate is moved when it is time.
+    fn look_around(&mut self) {
+        let Self { pipeline, memory, .. } = self;
+        let outbox = &mut memory.outbox;
+        if outbox.shed() != self.told_shed {
+            self.told_shed = outbox.shed();
+            pipeline.note_shedding();
+        }
+        if let Some(tuning) = self.dither.due(pipeline.next_sample()) {
+            let change = self.source.tune(tuning);
+            self.dither.changed(change);
+            if let Some(change) = change {
+                pipeline.change_rate(change, &mut |message, sample| outbox.record(message, sample));
+            }
+        }
+    }
+
+    /// Sends the averages under way, one a step, each when there is room for it; then says `End`. `true` when
+    /// something was done.
+    fn wind_up(&mut self) -> bool {
+        let Self { pipeline, memory, .. } = self;
+        let outbox = &mut memory.outbox;
+        if outbox.passing_room() < PASSING / 4 * 3 {
+            return false;
+        }
+        let has_sent = pipeline.send_average(&mut |message, sample| outbox.record(message, sample));
+        if !has_sent && let Some(cause) = self.ending.take() {
+            pipeline.end(cause, &mut |message, sample| outbox.record(message, sample));
+        }
+        true
     }
 
     fn send(&mut self) -> Result<bool, L::Error> {
@@ -339,15 +386,18 @@ where
             return Outcome::Unsupported;
         }
         self.is_stopped = false;
+        if let Some(cause) = self.ending.take() {
+            let Self { pipeline, memory, .. } = self;
+            let outbox = &mut memory.outbox;
+            pipeline.end(cause, &mut |message, sample| outbox.record(message, sample));
+        }
         Outcome::Done
     }
 
     fn stop(&mut self) -> Outcome {
         if !self.is_stopped && !self.is_ended {
             self.is_stopped = true;
-            let Self { pipeline, memory, .. } = self;
-            let outbox = &mut memory.outbox;
-            pipeline.end(EndCause::Stopped, &mut |message, sample| outbox.record(message, sample));
+            self.ending = Some(EndCause::Stopped);
         }
         Outcome::Done
     }

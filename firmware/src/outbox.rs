@@ -215,6 +215,11 @@ impl<const KEPT: usize, const PASSING: usize> Outbox<KEPT, PASSING> {
         KEPT - self.kept.used
     }
 
+    /// Bytes still free for passing messages.
+    pub const fn passing_room(&self) -> usize {
+        PASSING - self.passing.used
+    }
+
     /// Takes a message made when the source had delivered `sample` pairs.
     pub fn record(&mut self, message: &Message, sample: u64) {
         trace::record(message, sample);

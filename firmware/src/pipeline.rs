@@ -5,7 +5,7 @@
 //!  (calibrated, aligned,      ├─► account ──────────────────────────► Summary, Totals
 //!   split into modes)         ├─► levels ───────────────────────────► Levels
 //!                             ├─► snippet ring ─────────────────────► Snippet            (kept)
-//!                             └─► spectra ──────────────────────────► Spectrum
+//!                             └─► spectra ──────────────────────────► Spectra
 //! ```
 //!
 //! Records depend on the samples and their indices only: any way of cutting the input into
@@ -23,7 +23,7 @@ use crate::staging::Staging;
 use crate::storm::StormGate;
 use crate::trace;
 use core::ops::DerefMut;
-use legwise_protocol::message::{End, EndCause, Gap, GapCause, Message, Settings, Totals};
+use legwise_protocol::message::{End, EndCause, Gap, GapCause, Message, RateChange, Settings, Totals};
 
 /// A record and the sample count at which it was made go to one of these.
 pub type Records<'a> = dyn FnMut(&Message, u64) + 'a;
@@ -81,7 +81,7 @@ impl<B: DerefMut<Target = Buffers>> Pipeline<B> {
     pub fn new(mut buffers: B, source: SourceDescription, settings: Settings) -> Self {
         let Buffers { staging, meters } = &mut *buffers;
         staging.begin(&source);
-        meters.restart();
+        meters.begin(&source);
         let is_skewed = staging.is_skewed();
         let stages = Stages {
             config: LimitConfig::new(&settings.limits, &settings.detection, source.legs, is_skewed),
@@ -151,6 +151,27 @@ impl<B: DerefMut<Target = Buffers>> Pipeline<B> {
             records(&Message::Gap(Gap { first_sample: at, samples, cause }), at);
         }
         self.buffers.staging.restart(next_sample);
+        self.buffers.meters.spectrum.break_off();
+    }
+
+    /// From a pair on the source takes pairs at another rate. The index goes on;
+    /// lengths in the settings stay what they are in pairs.
+    pub fn change_rate(&mut self, rate: RateChange, records: &mut Records<'_>) {
+        self.buffers.meters.spectrum.change_rate(rate.first_sample, rate.sample_rate_mhz);
+        records(&Message::Rate(rate), self.next_sample());
+    }
+
+    /// The link could not take everything: spectra become fewer for a while.
+    pub fn note_shedding(&mut self) {
+        self.buffers.meters.spectrum.note_shedding();
+    }
+
+    /// Deals with all staged pairs and sends one of the averages of spectra, for [`Self::end`] to come; `false`
+    /// when there is none left.
+    pub fn send_average(&mut self, records: &mut Records<'_>) -> bool {
+        while self.deal(records) {}
+        let sample = self.next_sample();
+        self.buffers.meters.spectrum.send_average(&mut |message| records(message, sample))
     }
 
     /// Changes what is watched for, from the next pair on. Everything open is finished first.
@@ -160,17 +181,20 @@ impl<B: DerefMut<Target = Buffers>> Pipeline<B> {
         stages.settings = settings;
         stages.config =
             LimitConfig::new(&settings.limits, &settings.detection, stages.source.legs, stages.is_skewed);
+        self.buffers.meters.spectrum.wind_up();
         records(&Message::Settings(settings), self.next_sample());
     }
 
     /// Finishes everything open and says `End`.
     pub fn end(&mut self, cause: EndCause, records: &mut Records<'_>) {
+        while self.send_average(records) {}
+        self.buffers.meters.spectrum.wind_up();
         self.flush(records);
         let totals = self.totals();
         records(&Message::End(End { cause, totals }), self.next_sample());
     }
 
-    /// Deals with all staged pairs and finishes every interval.
+    /// Deals with all staged pairs and finishes every interval, averages of spectra excepted.
     fn flush(&mut self, records: &mut Records<'_>) {
         while self.deal(records) {}
         let sample = self.buffers.staging.next_sample();
@@ -188,10 +212,10 @@ impl<B: DerefMut<Target = Buffers>> Pipeline<B> {
 }
 
 impl Meters {
-    fn restart(&mut self) {
+    fn begin(&mut self, source: &SourceDescription) {
         self.levels.restart();
         self.snippets.restart();
-        self.spectrum.restart();
+        self.spectrum.begin(source);
     }
 }
 
@@ -217,10 +241,8 @@ impl Stages {
             self.finish_levels(&mut meters.levels, records);
         }
         if reporting.spectrum_segments > 0 {
-            meters.spectrum.take(block, reporting.spectrum_skip);
-            if meters.spectrum.segments() >= reporting.spectrum_segments {
-                meters.spectrum.finish(self.source.sample_rate_mhz, records);
-            }
+            let rest = (meters.levels.rest_uv(), self.settings.detection.idle_below_uv);
+            meters.spectrum.take(block, &meters.snippets, rest, &reporting, records);
         }
     }
 
@@ -273,7 +295,5 @@ impl Stages {
         if meters.levels.samples() > 0 {
             self.finish_levels(&mut meters.levels, records);
         }
-        meters.spectrum.finish(self.source.sample_rate_mhz, records);
-        meters.spectrum.break_off();
     }
 }

@@ -22,7 +22,7 @@ pub const LONGEST_BEFORE: usize = 256;
 /// Most pairs kept from its start onwards.
 pub const LONGEST_AFTER: usize = 512;
 
-const _: () = assert!(RING.is_power_of_two());
+const _: () = assert!(RING.is_power_of_two() && RING == crate::fft::POINTS, "a segment is the whole ring");
 const _: () =
     assert!(LONGEST_BEFORE + LONGEST_AFTER + BLOCK_PAIRS <= RING, "a capture must fit beside a new block");
 
@@ -37,8 +37,8 @@ struct Capture {
 /// The ring and the capture in progress.
 #[derive(Debug)]
 pub struct SnippetRing {
-    leg_a: [i32; RING],
-    leg_b: [i32; RING],
+    /// Codes of leg A and leg B.
+    pairs: [(i32, i32); RING],
     /// Oldest pair that belongs to the present stretch without a gap.
     oldest_sample: u64,
     /// Just past the newest pair.
@@ -58,8 +58,7 @@ impl SnippetRing {
     /// An empty ring.
     pub const fn new() -> Self {
         Self {
-            leg_a: [0; RING],
-            leg_b: [0; RING],
+            pairs: [(0, 0); RING],
             oldest_sample: 0,
             end_sample: 0,
             capture: None,
@@ -81,10 +80,32 @@ impl SnippetRing {
             self.oldest_sample = block.first_sample;
         }
         let start = block.first_sample as usize % RING;
-        copy_around(&mut self.leg_a, start, block.code_a);
-        copy_around(&mut self.leg_b, start, block.code_b);
+        let (early, late) = self.pairs.split_at_mut(start);
+        let codes = || block.code_a.iter().copied().zip(block.code_b.iter().copied());
+        let before_end = late.len();
+        for (slot, pair) in late.iter_mut().zip(codes()) {
+            *slot = pair;
+        }
+        for (slot, pair) in early.iter_mut().zip(codes().skip(before_end)) {
+            *slot = pair;
+        }
         self.end_sample = block.end_sample();
         self.oldest_sample = self.oldest_sample.max(self.end_sample.saturating_sub(RING as u64));
+    }
+
+    /// The codes of the pair with index `sample`, any one among the newest 1024.
+    #[inline(always)]
+    pub(crate) fn pair(&self, sample: usize) -> (i32, i32) {
+        self.pairs[sample % RING]
+    }
+
+    /// Means of all codes in the ring: rounded down, and the rest.
+    pub(crate) fn means(&self) -> ((i32, f32), (i32, f32)) {
+        let sums = self.pairs.iter().fold((0_i64, 0_i64), |(sum_a, sum_b), &(code_a, code_b)| {
+            (sum_a + i64::from(code_a), sum_b + i64::from(code_b))
+        });
+        let mean = |sum: i64| ((sum >> RING.ilog2()) as i32, (sum & (RING as i64 - 1)) as f32 / RING as f32);
+        (mean(sums.0), mean(sums.1))
     }
 
     /// An excursion began at `sample`: captures around it, unless one is being captured or the storm
@@ -163,9 +184,7 @@ impl SnippetRing {
         let (mut a, mut b) = ([0; CODED_PAIRS], [0; CODED_PAIRS]);
         let available = (end - sample).min(CODED_PAIRS as u64) as usize;
         for (offset, (a, b)) in a.iter_mut().zip(b.iter_mut()).enumerate().take(available) {
-            let position = (sample as usize + offset) % RING;
-            *a = self.leg_a.get(position).copied().unwrap_or(0);
-            *b = self.leg_b.get(position).copied().unwrap_or(0);
+            (*a, *b) = self.pair(sample as usize + offset);
         }
         for pairs in [available, available.min(CODED_PAIRS / 2)] {
             let legs = (a.get(..pairs).unwrap_or(&[]), b.get(..pairs).unwrap_or(&[]));
@@ -175,16 +194,5 @@ impl SnippetRing {
             }
         }
         (0, 0)
-    }
-}
-
-/// Copies `codes` into the ring from `start` on, around its end.
-fn copy_around(ring: &mut [i32; RING], start: usize, codes: &[i32]) {
-    let (front, back) = codes.split_at(codes.len().min(RING - start.min(RING)));
-    for (slot, &code) in ring.get_mut(start..).unwrap_or(&mut []).iter_mut().zip(front) {
-        *slot = code;
-    }
-    for (slot, &code) in ring.iter_mut().zip(back) {
-        *slot = code;
     }
 }

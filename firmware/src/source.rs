@@ -1,12 +1,13 @@
 //! Where sample pairs come from: the first of the two hardware traits.
 
-use legwise_protocol::message::{GapCause, LegScale};
+use legwise_protocol::message::{GapCause, LegScale, RateChange};
 
-/// What a source is, as far as the pipeline must know. Constant while the source lives.
+/// What a source is, as far as the pipeline must know. Constant while the source lives, but for the rate
+/// ([`PairSource::tune`]).
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 #[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct SourceDescription {
-    /// Pairs per second, in millihertz.
+    /// Nominal pairs per second, in millihertz.
     pub sample_rate_mhz: u64,
     /// How much later than leg A leg B is sampled; 0 for simultaneous sampling. Less than one
     /// sample period in magnitude.
@@ -34,6 +35,18 @@ pub enum Taken {
     Finished,
 }
 
+/// Where a source can move its rate: by two or three per cent, always to the same rates.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub enum Tuning {
+    /// The rate of [`SourceDescription`].
+    Nominal,
+    /// Above it.
+    Faster,
+    /// Below it, by as much.
+    Slower,
+}
+
 /// A source of sample pairs: a dual converter, an external converter, a recording, a simulated line.
 ///
 /// # For driver authors
@@ -59,4 +72,10 @@ pub trait PairSource {
     /// # Errors
     /// When the hardware or the recording fails; the caller may try again.
     fn take(&mut self, leg_a: &mut [i32], leg_b: &mut [i32]) -> Result<Taken, Self::Error>;
+
+    /// Goes over to another rate and says which and from which pair on, the index going on; `None` when the
+    /// source has one rate only. The first pair at the new rate may be one still to be taken.
+    fn tune(&mut self, _tuning: Tuning) -> Option<RateChange> {
+        None
+    }
 }

@@ -24,7 +24,7 @@ use std::convert::Infallible;
 pub const USUAL_BYTES_PER_S: u32 = 115_200 / 10;
 /// Outbox of the emulated board: kept bytes, passing bytes (`firmware/boards/emulated/src/bin/monitor.rs`).
 const KEPT_BYTES: usize = 6 * 1024;
-const PASSING_BYTES: usize = 5 * 1024;
+const PASSING_BYTES: usize = 6 * 1024;
 /// Name the emulated board gives itself.
 pub const BOARD_NAME: &str = "emulated M4F";
 
@@ -161,7 +161,8 @@ pub fn play(replay: &Replay, settings: Settings, link_bytes_per_s: u32) -> (Vec<
     (std::mem::take(&mut monitor.link_mut().inner_mut().host).into_frames(), shed)
 }
 
-/// Bytes per second a stream asks for.
+/// Bytes per second a stream asks for. The last words at the end of the recording are left out: a night has
+/// one end.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Demand {
     /// All bytes over the whole time.
@@ -170,27 +171,34 @@ pub struct Demand {
     pub kept_mean: f64,
     /// Bytes of the messages made in the busiest second.
     pub busiest: usize,
+    /// Bytes per second of the busiest eight that follow each other: a whole round of spectra, the lowest rung
+    /// excepted.
+    pub busiest_eight: f64,
 }
 
 impl Demand {
-    /// What `frames` asked for, each counted in the second in which it was made. The introduction and
-    /// the last words at the end of the recording are left out of the seconds, not of the mean.
+    /// What `frames` asked for, each counted in the second in which it was made.
     pub fn of(frames: &[DeviceFrame], replay: &Replay) -> Self {
         let rate_hz = replay.description.sample_rate_mhz / 1000;
-        let seconds = replay.pairs() as f64 / rate_hz as f64;
-        let mut by_second = vec![0; seconds as usize + 2];
+        let seconds = (replay.pairs() as u64 / rate_hz) as usize;
+        let mut by_second = vec![0; seconds];
         let (mut total, mut kept) = (0, 0);
         for frame in frames {
+            let Some(second) = by_second.get_mut((frame.envelope.sample / rate_hz) as usize) else {
+                continue;
+            };
             let bytes = wire_bytes(frame);
+            *second += bytes;
             total += bytes;
             if frame.message.is_kept() {
                 kept += bytes;
             }
-            by_second[(frame.envelope.sample / rate_hz) as usize] += bytes;
         }
+        let eights = by_second.windows(8).map(|eight| eight.iter().sum::<usize>());
         Self {
-            mean: total as f64 / seconds,
-            kept_mean: kept as f64 / seconds,
+            mean: total as f64 / seconds as f64,
+            kept_mean: kept as f64 / seconds as f64,
+            busiest_eight: eights.max().unwrap_or(0) as f64 / 8.0,
             busiest: by_second.into_iter().max().unwrap_or(0),
         }
     }

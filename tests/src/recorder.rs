@@ -2,13 +2,36 @@
 
 use legwise_firmware::pipeline::{Buffers, Pipeline};
 use legwise_firmware::source::SourceDescription;
+use legwise_protocol::cross::{self, BinCodes};
 use legwise_protocol::message::{
-    EndCause, Excursion, GapCause, Levels, Message, Mode, Settings, SpectrumPart, Storm, Totals,
+    EndCause, Excursion, GapCause, Levels, Message, Mode, Settings, SpectraPart, Storm, Totals,
 };
 use legwise_protocol::power;
 
 /// A record and the sample count at which it was made.
 pub type Record = (Message, u64);
+
+/// One bin of an average, V²/Hz.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Bin {
+    /// Common mode.
+    pub common: f64,
+    /// Differential mode.
+    pub differential: f64,
+    /// Between them, `conj(C)·D`.
+    pub cross: (f64, f64),
+}
+
+/// A whole average.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Average {
+    /// 0 is the full rate.
+    pub rung: u8,
+    /// Its first part: set, segments, place in time.
+    pub part: SpectraPart,
+    /// Its bins, from `part.from_bin` on.
+    pub bins: Vec<Bin>,
+}
 
 /// A pipeline and everything it said.
 #[derive(Debug)]
@@ -80,33 +103,54 @@ impl Recorder {
         self.pipeline.totals()
     }
 
-    /// The first whole spectrum of a mode, V²/Hz per bin.
+    /// The first whole spectrum of a mode at the full rate, V²/Hz per bin.
     pub fn spectrum(&self, mode: Mode) -> Vec<f64> {
         self.spectra(mode).into_iter().next().unwrap()
     }
 
-    /// Every whole spectrum of a mode, V²/Hz per bin.
+    /// Every whole spectrum of a mode at the full rate, V²/Hz per bin.
     pub fn spectra(&self, mode: Mode) -> Vec<Vec<f64>> {
-        let parts = self.spectrum_parts().into_iter().filter(|part| part.mode == mode);
-        let mut spectra: Vec<Vec<f64>> = Vec::new();
-        for part in parts {
-            if part.first_bin == 0 {
-                spectra.push(Vec::new());
-            }
-            let bins = spectra.last_mut().unwrap();
-            assert_eq!(bins.len(), usize::from(part.first_bin), "parts come in order");
-            let codes = part.codes.as_slice().chunks_exact(2);
-            bins.extend(codes.map(|code| power::decode(u16::from_le_bytes([code[0], code[1]]))));
-        }
-        for bins in &spectra {
-            assert_eq!(bins.len(), 513);
-        }
-        spectra
+        let of_bin = |bin: &Bin| match mode {
+            Mode::Common => bin.common,
+            Mode::Differential => bin.differential,
+        };
+        let whole = self.averages().into_iter().filter(|average| average.rung == 0);
+        whole.map(|average| average.bins.iter().map(of_bin).collect()).collect()
     }
 
-    /// All parts of spectra, in order.
-    pub fn spectrum_parts(&self) -> Vec<SpectrumPart> {
-        self.pick(|message| if let Message::Spectrum(part) = message { Some(*part) } else { None })
+    /// Every average of every rung, put together from its parts.
+    pub fn averages(&self) -> Vec<Average> {
+        let mut averages: Vec<Average> = Vec::new();
+        for part in self.pick(|message| if let Message::Spectra(part) = message { Some(*part) } else { None })
+        {
+            if part.first_bin == part.from_bin {
+                averages.push(Average { rung: part.rung, part, bins: Vec::new() });
+            }
+            let average = averages.last_mut().unwrap();
+            assert_eq!(usize::from(part.first_bin), usize::from(part.from_bin) + average.bins.len());
+            let (codes, rest) = part.codes.as_slice().as_chunks::<{ cross::BIN_BYTES }>();
+            assert!(rest.is_empty());
+            average.bins.extend(codes.iter().map(|bytes| {
+                let codes = BinCodes::from_bytes(*bytes);
+                Bin {
+                    common: power::decode(codes.common),
+                    differential: power::decode(codes.differential),
+                    cross: (cross::decode(codes.cross.0), cross::decode(codes.cross.1)),
+                }
+            }));
+        }
+        for average in &averages {
+            assert_eq!(average.bins.len(), usize::from(average.part.bins));
+        }
+        averages
+    }
+
+    /// All parts of spectra at the full rate, in order.
+    pub fn spectrum_parts(&self) -> Vec<SpectraPart> {
+        self.pick(|message| match message {
+            Message::Spectra(part) if part.rung == 0 => Some(*part),
+            _ => None,
+        })
     }
 
     /// What `choose` finds in the records.

@@ -145,7 +145,7 @@ proptest! {
         let has = |what: fn(&Message) -> bool| whole.iter().any(|(message, _)| what(message));
         prop_assert!(has(|message| matches!(message, Message::Excursion(_))));
         prop_assert!(has(|message| matches!(message, Message::Snippet(_))));
-        prop_assert!(has(|message| matches!(message, Message::Spectrum(_))));
+        prop_assert!(has(|message| matches!(message, Message::Spectra(_))));
     }
 }
 

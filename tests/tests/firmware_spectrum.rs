@@ -23,6 +23,8 @@ fn settings_for(segments: u32) -> Settings {
     let mut settings = settings::for_receiver(receiver, RATE_HZ * 1000);
     settings.reporting.spectrum_segments = segments;
     settings.reporting.snippet_after = 0;
+    // One set: a pair at rest whatever it carries.
+    settings.detection.idle_below_uv = 90_000_000;
     settings
 }
 

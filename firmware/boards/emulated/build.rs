@@ -7,9 +7,9 @@ use std::path::PathBuf;
 
 fn main() {
     let out = PathBuf::from(std::env::var_os("OUT_DIR").unwrap_or_default());
-    let budgets = if std::env::var_os("LEGWISE_ROOM").is_some() { ["256K"; 2] } else { ["96K", "64K"] };
+    let budgets = if std::env::var_os("LEGWISE_ROOM").is_some() { ["256K"; 2] } else { ["96K", "90K"] };
     let written = std::fs::read_to_string("budget.x").and_then(|text| {
-        std::fs::write(out.join("memory.x"), text.replace("96K", budgets[0]).replace("64K", budgets[1]))
+        std::fs::write(out.join("memory.x"), text.replace("96K", budgets[0]).replace("90K", budgets[1]))
     });
     if let Err(error) = written {
         println!("cargo::error=could not write memory.x: {error}");

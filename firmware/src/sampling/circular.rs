@@ -16,8 +16,8 @@
 use super::counter::nearest;
 use super::ring_reader::RingReader;
 use super::scan::{LONGEST_SCAN, Scan, ScanLayout};
-use crate::source::{PairSource, SourceDescription, Taken};
-use legwise_protocol::message::GapCause;
+use crate::source::{PairSource, SourceDescription, Taken, Tuning};
+use legwise_protocol::message::{GapCause, RateChange};
 
 /// How far ring position and clock may disagree before sampling counts as broken off: a conversion
 /// under way is counted by the clock and not yet in the ring, and reading both takes time. Whole scans
@@ -53,6 +53,12 @@ pub trait CircularConverter {
     /// Stops everything, empties queues, and starts again with leg A at place 0. Returns the instant of
     /// the first scan, as [`Self::elapsed_scans`] counts.
     fn restart(&mut self) -> u64;
+
+    /// Goes over to another rate without a gap: the first instant spaced by it, as [`Self::elapsed_scans`]
+    /// counts, and the rate in millihertz; `None` when there is one rate only.
+    fn tune(&mut self, _tuning: Tuning) -> Option<(u64, u64)> {
+        None
+    }
 }
 
 /// What a source has been through. Counts saturate.
@@ -279,6 +285,11 @@ where
         }
         self.restarts_in_a_row = 0;
         Ok(Taken::Pairs { first_sample, pairs, gap: self.gap.take() })
+    }
+
+    fn tune(&mut self, tuning: Tuning) -> Option<RateChange> {
+        let (first_sample, sample_rate_mhz) = self.converter.tune(tuning)?;
+        Some(RateChange { first_sample, sample_rate_mhz })
     }
 }
 

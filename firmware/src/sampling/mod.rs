@@ -5,6 +5,7 @@
 //! ```text
 //!  registers (board)            here, tested on the desktop
 //!  ring position ─► [`counter`]      position modulo the ring ─► words since the start
+//!  timer ────────► [`tick_clock`]   ticks ─► sampling instants, across changes of the rate
 //!                   [`ring_reader`]  words written ─► whole scans to copy, or how many were lost
 //!  ring words ────► [`scan`]         words of a scan ─► leg A, leg B, marker right or wrong
 //!                   [`circular`]     all of it as a [`crate::source::PairSource`]
@@ -19,3 +20,4 @@ pub mod circular;
 pub mod counter;
 pub mod ring_reader;
 pub mod scan;
+pub mod tick_clock;

@@ -33,7 +33,7 @@ use stm32g4xx_hal::time::{ExtU32, RateExtU32};
 use stm32g4xx_hal::usb;
 
 /// Outbox: kept and passing messages, bytes.
-const KEPT_BYTES: usize = 8 * 1024;
+const KEPT_BYTES: usize = 6 * 1024;
 const PASSING_BYTES: usize = 6 * 1024;
 /// One segment in four is transformed: even a storm then leaves time to spare (README.md, "How fast").
 const SPECTRUM_SKIP: u16 = 3;
@@ -90,7 +90,6 @@ fn main() -> ! {
     let [receiver, ..] = &TABLE;
     let mut settings = settings::for_receiver(receiver, converter::SAMPLE_RATE_MHZ);
     settings.reporting.spectrum_skip = SPECTRUM_SKIP;
-    settings.reporting.spectrum_segments /= u32::from(SPECTRUM_SKIP) + 1; // a spectrum as often as before
     let hardware = (source, link, alarm);
     let monitor = Monitor::new(identity, settings, hardware, (buffers, memory));
     duty::run(monitor, || watchdog.feed(), trouble_lamp)

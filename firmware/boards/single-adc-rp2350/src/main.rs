@@ -109,7 +109,6 @@ fn main() -> ! {
     let [receiver, ..] = &TABLE;
     let mut settings = settings::for_receiver(receiver, SAMPLE_RATE_MHZ);
     settings.reporting.spectrum_skip = SPECTRUM_SKIP;
-    settings.reporting.spectrum_segments /= u32::from(SPECTRUM_SKIP) + 1; // a spectrum as often as before
     let hardware = (source, link, alarm);
     let monitor = Monitor::new(identity, settings, hardware, (buffers, memory));
     duty::run(monitor, || watchdog.feed(), trouble_lamp)

@@ -37,7 +37,7 @@ pub fn same(image: &Path) -> Outcome<()> {
         let desktop = from_answer(run_desktop(replay.clone()));
         let is_equal = emulated == desktop;
         let kept = desktop.iter().filter(|frame| frame.message.is_kept()).count();
-        let spectra = desktop.iter().filter(|frame| matches!(frame.message, Message::Spectrum(_))).count();
+        let spectra = desktop.iter().filter(|frame| matches!(frame.message, Message::Spectra(_))).count();
         println!(
             "{name:<34} {:>8} {:>7} {kept:>6} {spectra:>8} {:>7}  {console}",
             replay.pairs(),

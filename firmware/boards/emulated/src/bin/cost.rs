@@ -19,7 +19,7 @@ use legwise_firmware::pipeline::{Buffers, Pipeline};
 use legwise_firmware::settings;
 use legwise_firmware::snippet_ring::SnippetRing;
 use legwise_firmware::source::SourceDescription;
-use legwise_firmware::spectrum::SpectrumMeter;
+use legwise_firmware::spectrum::{LOWER_RUNG_BYTES, LOWER_RUNGS, SpectrumMeter};
 use legwise_firmware::staging::Staging;
 use legwise_firmware::storm::StormGate;
 use legwise_protocol::framing::DEVICE_FRAME_BYTES;
@@ -28,7 +28,7 @@ use legwise_protocol::receivers::TABLE;
 use legwise_protocol::units::Span;
 
 /// Blocks a stage is counted over.
-const BLOCKS: usize = 64;
+const BLOCKS: usize = 512;
 const PAIRS: u32 = (BLOCKS * BLOCK_PAIRS) as u32;
 const RATE_MHZ: u64 = 500_000_000;
 
@@ -192,14 +192,21 @@ fn count_pipeline(signal: Signal, settings: Settings, outbox: &mut Outbox<6144, 
 
 /// One transform of anything, its output added up.
 fn count_transform() -> u32 {
-    let data = core::hint::black_box([Complex { re: 1.0, im: -0.5 }; POINTS]);
-    let (mut work, mut bins) = ([Complex::ZERO; POINTS], [0.0; BINS]);
-    let point = |n: usize, row: usize| data[row % 8 * COLUMNS + n % COLUMNS];
-    let column = |n| core::array::from_fn(|row| point(n, row).sum_and_difference(point(n, row + 4)));
+    let data = [Complex { re: 1.0, im: -0.5 }; POINTS];
+    let (mut work, mut sums) = ([Complex::ZERO; POINTS], [Complex::ZERO; BINS]);
+    let point = |n: usize, row: usize| data[(n + POINTS / 8 * row) % POINTS];
     let counter = Counter::start();
-    transform(&mut work, column, &mut bins, |bin, x, mirror| *bin += x.re + x.im + mirror.re + mirror.im);
+    transform(
+        &mut work,
+        |n| core::array::from_fn(|row| point(n, row).sum_and_difference(point(n, row + 4))),
+        |bin, x, mirror| {
+            if let Some(sum) = sums.get_mut(bin) {
+                *sum = x.sum_and_difference(mirror).0;
+            }
+        },
+    );
     let instructions = counter.instructions();
-    core::hint::black_box(&bins);
+    core::hint::black_box(&sums);
     instructions
 }
 
@@ -248,6 +255,23 @@ fn count_framing() -> (u32, u32) {
     (instructions, bytes as u32)
 }
 
+/// All rungs of the ladder.
+fn count_spectra(settings: &Settings) -> u32 {
+    let (mut spectrum, mut ring) = (SpectrumMeter::default(), SnippetRing::default());
+    spectrum.begin(&description(0));
+    let rest = (0, settings.detection.idle_below_uv);
+    let mut total = 0;
+    each_block(Signal::Quiet, 0, &mut |block| {
+        ring.take(block);
+        let counter = Counter::start();
+        spectrum.take(block, &ring, rest, &settings.reporting, &mut |message| {
+            core::hint::black_box(message);
+        });
+        total += counter.instructions();
+    });
+    total
+}
+
 #[entry]
 fn main() -> ! {
     let mut settings = settings::for_receiver(&TABLE[0], RATE_MHZ);
@@ -265,27 +289,29 @@ fn main() -> ! {
     let mut levels = LevelMeter::default();
     is_kept &= line("levels", count(Signal::Quiet, 0, &mut |block| levels.take(block, 600_000)), PAIRS, 24);
     let mut ring = SnippetRing::default();
-    is_kept &= line("snippet ring", count(Signal::Quiet, 0, &mut |block| ring.take(block)), PAIRS, 12);
+    is_kept &= line("snippet ring", count(Signal::Quiet, 0, &mut |block| ring.take(block)), PAIRS, 8);
     let (cost, pairs) = count_snippet(&settings);
     is_kept &= line("  compression, per pair of a snippet", cost, pairs, 680);
-    let mut spectrum = SpectrumMeter::default();
-    let cost = count(Signal::Quiet, 0, &mut |block| spectrum.take(block, 0));
-    is_kept &= line("spectra, every segment (50 % overlap)", cost, PAIRS, 153);
-    let mut spectrum = SpectrumMeter::default();
-    let cost = count(Signal::Quiet, 0, &mut |block| spectrum.take(block, 7));
-    is_kept &= line("spectra, one segment in eight", cost, PAIRS, 23);
+    is_kept &= line("spectra, every segment (50 % overlap)", count_spectra(&settings), PAIRS, 166);
+    settings.reporting.spectrum_skip = 7;
+    is_kept &= line("spectra, one segment in eight", count_spectra(&settings), PAIRS, 73);
+    settings.reporting.spectrum_skip = u16::MAX;
+    is_kept &= line("  filters of the ladder alone", count_spectra(&settings), PAIRS, 56);
+    settings.reporting.spectrum_skip = 0;
     is_kept &= line("  one transform, per point", count_transform(), POINTS as u32, 63);
 
     let (cost, bytes) = count_framing();
     is_kept &= line("message and framing, per byte sent", cost, bytes, 120);
     let mut outbox = Outbox::new();
     let cost = count_pipeline(Signal::Quiet, settings, &mut outbox);
-    is_kept &= line("everything, quiet, every segment", cost, PAIRS, 233);
+    is_kept &= line("everything, quiet, every segment", cost, PAIRS, 248);
     settings.reporting.spectrum_skip = 7;
     let cost = count_pipeline(Signal::Quiet, settings, &mut outbox);
-    is_kept &= line("everything, quiet, one segment in eight", cost, PAIRS, 106);
+    is_kept &= line("everything, quiet, one segment in eight", cost, PAIRS, 150);
     let cost = count_pipeline(Signal::Storm, settings, &mut outbox);
-    is_kept &= line("everything, storm, one segment in eight", cost, PAIRS, 231);
+    is_kept &= line("everything, storm, one segment in eight", cost, PAIRS, 236);
+    hprintln!("RAM of the spectra: {} bytes,", size_of::<SpectrumMeter>());
+    hprintln!("  of each of {} lower rungs: {} bytes", LOWER_RUNGS, LOWER_RUNG_BYTES);
     debug::exit(if is_kept { debug::EXIT_SUCCESS } else { debug::EXIT_FAILURE });
     loop {}
 }

@@ -21,7 +21,7 @@ use legwise_protocol::receivers::TABLE;
 use static_cell::ConstStaticCell;
 
 const KEPT_BYTES: usize = 6 * 1024;
-const PASSING_BYTES: usize = 5 * 1024;
+const PASSING_BYTES: usize = 6 * 1024;
 /// Kept messages one block can make, at most, with room to spare: below this the replay waits.
 const KEPT_ROOM_BYTES: usize = 3 * 1024;
 
