@@ -122,6 +122,21 @@ impl Active {
         }
     }
 
+    /// Lets a block of a leg pass unheard: what goes on from block to block goes on, waves are not made.
+    pub fn pass_over(&mut self, leg: usize, block: Block<'_>, scratch: &mut Wave) {
+        match &mut self.shape {
+            Shape::Tones(_, envelopes) | Shape::SixPulse(_, envelopes) | Shape::Level(envelopes) => {
+                envelopes[leg].fill(block.first as f64, scratch);
+            }
+            Shape::Bridge(bridge) => {
+                bridge.fill(leg, block, scratch);
+            }
+            Shape::Arc(arc) => {
+                arc.fill(leg, block, scratch);
+            }
+        }
+    }
+
     fn accumulate(&self, factor: f32, wave: &Wave, gains: &[Wave], sum: &mut Wave) {
         match self.channel.and_then(|channel| gains.get(channel)) {
             Some(gains) => {

@@ -1,29 +1,22 @@
-//! The simulated pair as a source of sample pairs.
+//! The simulated pair as a source of sample pairs, which can move its rate.
 //!
-//! ```text
-//!  traffic -> bus states -> follower per leg -> volts and gains ─┐
-//!  disturbances -> envelope, tones, bridge, arc ─ x gains ───────┴─ + noise -> converter -> codes
-//! ```
-//!
-//! Work is done in blocks that start at multiples of [`BLOCK`], whatever buffers the caller brings:
-//! that makes the codes independent of how they are fetched. Memory is a few blocks and one exchange
-//! of messages, whatever the length.
+//! One scenario sampled at three rates is one pair seen three times: traffic and disturbances happen in
+//! seconds. The source that is heard hands out pairs; going over to another rate lets the time that has
+//! passed go by in the other one, and goes on there with its next pair.
 
-use super::disturbance::{Active, Block, LegClock};
+mod one_rate;
+
+use super::Activity;
 use super::error::ScenarioError;
-use super::follower::{Follower, Queue};
-use super::front_end::Converter;
-use super::random::Hiss;
-use super::responses::Responses;
 use super::scenario::Scenario;
-use super::traffic::{PollCounts, Talk};
-use super::{Activity, BLOCK, Wave};
+use super::traffic::PollCounts;
 use core::convert::Infallible;
-use legwise_firmware::source::{PairSource, SourceDescription, Taken};
+use legwise_firmware::source::{PairSource, SourceDescription, Taken, Tuning};
+use legwise_protocol::message::RateChange;
+use one_rate::OneRate;
 
-/// Stream numbers of the noise of leg A, leg B and of the sampling instant.
-const HISS: [u64; 2] = [0x6e6f_6973_6541, 0x6e6f_6973_6542];
-const JITTER: u64 = 0x6a69_7474_6572;
+/// How far the rate is moved.
+const DITHER: f64 = 0.025;
 
 /// How much of a scenario to simulate.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -39,29 +32,15 @@ pub enum Length {
 /// A simulated pair behind a simulated monitor.
 #[derive(Clone, Debug)]
 pub struct LineSource {
+    scenario: Scenario,
+    seed: u64,
     description: SourceDescription,
-    sample_rate_hz: f64,
     length: u64,
     /// Number of the next pair handed out.
     next: u64,
-    talk: Talk,
-    queue: Queue,
-    disturbances: Vec<Active>,
-    legs: [Leg; 2],
-    jitter: Option<(f64, Hiss)>,
-    /// Number of the first pair of the block that is ready; `u64::MAX` before the first.
-    ready: u64,
-}
-
-#[derive(Clone, Debug)]
-struct Leg {
-    follower: Follower,
-    /// Volts, then the gain of each channel.
-    waves: Vec<Wave>,
-    noise_v: f64,
-    hiss: Hiss,
-    converter: Converter,
-    codes: [i32; BLOCK],
+    /// At the nominal rate, faster, slower; made when first needed.
+    rates: [Option<Box<OneRate>>; 3],
+    heard: usize,
 }
 
 impl LineSource {
@@ -88,44 +67,10 @@ impl LineSource {
                 ));
             }
         };
-        let responses = Responses::new(scenario)?;
-        let monitor = &scenario.monitor;
-        let clocks = [0.5, -0.5].map(|sign| LegClock {
-            filter_tau: monitor.front_end.rc_us * 1e-6 * rate * (1.0 + sign * monitor.front_end.rc_mismatch),
-            delay: if sign < 0.0 { f64::from(monitor.adc.skew_ns) * 1e-9 * rate } else { 0.0 },
-        });
-        let legs = [0, 1].map(|leg: usize| {
-            let edges = responses.edges_s.iter().map(|edge| edge.map(|seconds| seconds * rate)).collect();
-            let clock = clocks[leg];
-            Leg {
-                follower: Follower::new(responses.legs[leg].clone(), edges, clock.filter_tau, clock.delay),
-                waves: vec![[0.0; BLOCK]; 1 + responses.channels.len()],
-                noise_v: monitor.front_end.noise_uv * 1e-6,
-                hiss: Hiss::new(seed, HISS[leg]),
-                converter: Converter::new(monitor, leg),
-                codes: [0; BLOCK],
-            }
-        });
-        let disturbances = (0..scenario.disturbances.len())
-            .filter_map(|index| Active::new(scenario, index, seed, clocks, &responses.channels))
-            .collect();
-        let jitter = monitor.adc.jitter_ns * 1e-9 * rate;
-        Ok(Self {
-            description: SourceDescription {
-                sample_rate_mhz: (rate * 1e3).round() as u64,
-                skew_ns: monitor.adc.skew_ns,
-                legs: [legs[0].converter.scale, legs[1].converter.scale],
-            },
-            sample_rate_hz: rate,
-            length,
-            next: 0,
-            talk: Talk::new(scenario, seed)?,
-            queue: Queue::default(),
-            disturbances,
-            legs,
-            jitter: (jitter > 0.0).then(|| (jitter, Hiss::new(seed, JITTER))),
-            ready: u64::MAX,
-        })
+        let nominal = Box::new(OneRate::new(scenario, seed)?);
+        let description = nominal.describe();
+        let rates = [Some(nominal), None, None];
+        Ok(Self { scenario: scenario.clone(), seed, description, length, next: 0, rates, heard: 0 })
     }
 
     /// Pairs this source gives in all; `None` when it never ends.
@@ -136,47 +81,32 @@ impl LineSource {
     /// Every disturbance that is on between two instants, in seconds from the first pair; in the order
     /// of the scenario. Asked for at any time, for any stretch: nothing is recorded for it.
     pub fn activity(&self, from_s: f64, until_s: f64) -> Vec<Activity> {
-        self.disturbances
-            .iter()
-            .flat_map(|disturbance| disturbance.activity(from_s, until_s, self.sample_rate_hz))
-            .collect()
+        self.rates[0].as_ref().map_or_else(Vec::new, |nominal| nominal.activity(from_s, until_s))
     }
 
     /// Questions and answers of the simulated traffic so far, up to one exchange ahead of the pairs.
     pub fn polls(&self) -> PollCounts {
-        self.talk.polls()
+        self.rates[self.heard].as_ref().map_or_else(PollCounts::default, |heard| heard.polls())
     }
 
-    /// Makes the block that starts at pair `first`. Blocks must be made in order.
-    fn make(&mut self, first: u64) {
-        // A leg sampled later looks up to one sample past the end of the block.
-        let until = (first + BLOCK as u64 + 1) as f64;
-        self.queue.tidy();
-        self.talk.extend(until, &mut self.queue.events);
-        for disturbance in &mut self.disturbances {
-            disturbance.prepare(until);
+    /// Events of the traffic that wait, and room for them.
+    #[cfg(test)]
+    fn waiting_events(&self) -> (usize, usize) {
+        self.rates[self.heard].as_ref().map_or((0, 0), |heard| heard.waiting_events())
+    }
+
+    /// Goes over to the source of another rate at the present time; its rate in pairs per second.
+    fn hear(&mut self, wanted: usize, factor: f64) -> Option<f64> {
+        let now_s = self.rates[self.heard].as_ref().map(|heard| heard.next() as f64 / heard.rate_hz())?;
+        if self.rates[wanted].is_none() {
+            let mut scenario = self.scenario.clone();
+            scenario.sample_rate_hz *= factor;
+            self.rates[wanted] = Some(Box::new(OneRate::new(&scenario, self.seed).ok()?));
         }
-        let mut instants = [0.0; BLOCK];
-        let jitter = self.jitter.as_mut().map(|(rms, hiss)| {
-            hiss.add(*rms, &mut instants);
-            &instants
-        });
-        let block = Block { first, jitter };
-        let mut scratch = [0.0; BLOCK];
-        for (index, leg) in self.legs.iter_mut().enumerate() {
-            let read = &mut self.queue.read[index];
-            leg.follower.fill(first as f64, &self.queue.events, read, jitter, &mut leg.waves);
-            if let Some((volts, gains)) = leg.waves.split_first_mut() {
-                for disturbance in &mut self.disturbances {
-                    disturbance.add(index, block, &mut scratch, gains, volts);
-                }
-                if leg.noise_v > 0.0 {
-                    leg.hiss.add(leg.noise_v, volts);
-                }
-                leg.converter.convert(volts, &mut leg.codes);
-            }
-        }
-        self.ready = first;
+        let source = self.rates[wanted].as_mut()?;
+        source.pass_over((now_s * source.rate_hz()).ceil() as u64);
+        self.heard = wanted;
+        Some(source.rate_hz())
     }
 }
 
@@ -194,23 +124,22 @@ impl PairSource for LineSource {
             return Ok(Taken::Finished);
         }
         let wanted = leg_a.len().min(leg_b.len()).min(usize::try_from(left).unwrap_or(usize::MAX));
-        if wanted == 0 {
+        let Some(heard) = self.rates[self.heard].as_mut().filter(|_| wanted > 0) else {
             return Ok(Taken::Nothing);
-        }
-        let mut pairs = 0;
-        while pairs < wanted {
-            let offset = (self.next % BLOCK as u64) as usize;
-            let block = self.next - offset as u64;
-            if self.ready != block {
-                self.make(block);
-            }
-            let count = (BLOCK - offset).min(wanted - pairs);
-            leg_a[pairs..pairs + count].copy_from_slice(&self.legs[0].codes[offset..offset + count]);
-            leg_b[pairs..pairs + count].copy_from_slice(&self.legs[1].codes[offset..offset + count]);
-            pairs += count;
-            self.next += count as u64;
-        }
-        Ok(Taken::Pairs { first_sample, pairs, gap: None })
+        };
+        heard.fill(&mut leg_a[..wanted], &mut leg_b[..wanted]);
+        self.next += wanted as u64;
+        Ok(Taken::Pairs { first_sample, pairs: wanted, gap: None })
+    }
+
+    fn tune(&mut self, tuning: Tuning) -> Option<RateChange> {
+        let (wanted, factor) = match tuning {
+            Tuning::Nominal => (0, 1.0),
+            Tuning::Faster => (1, 1.0 + DITHER),
+            Tuning::Slower => (2, 1.0 - DITHER),
+        };
+        let rate_hz = self.hear(wanted, factor)?;
+        Some(RateChange { first_sample: self.next, sample_rate_mhz: (rate_hz * 1e3).round() as u64 })
     }
 }
 

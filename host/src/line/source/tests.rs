@@ -303,9 +303,46 @@ fn memory_does_not_grow_with_length() {
     for round in 0..160 {
         source.take(&mut a, &mut b).unwrap();
         if round == 40 || round == 159 {
-            room.push(source.queue.events.capacity());
+            room.push(source.waiting_events().1);
         }
-        assert!(source.queue.events.len() < 10_000);
+        assert!(source.waiting_events().0 < 10_000);
     }
     assert_eq!(room[0], room[1]);
+}
+
+/// One world seen at three rates: every sample is what the nominal rate has nearest to its instant, but for
+/// edges of data that fall between.
+#[test]
+fn another_rate_sees_the_same_pair_at_the_same_time() {
+    let mut scenario = crate::line::scenarios::by_name("press-ground").unwrap();
+    scenario.monitor.front_end.noise_uv = 0.0;
+    scenario.monitor.adc.jitter_ns = 0.0;
+    let rate = scenario.sample_rate_hz;
+    let second = rate as usize;
+    let source = || LineSource::new(&scenario, 5, Length::Minutes(0.1)).unwrap();
+    let take = |source: &mut LineSource, pairs: usize| {
+        let (mut leg_a, mut leg_b) = (vec![0; pairs], vec![0; pairs]);
+        assert!(matches!(source.take(&mut leg_a, &mut leg_b), Ok(Taken::Pairs { .. })));
+        leg_a
+    };
+    let truth = take(&mut source(), 4 * second);
+    let mut tuned = source();
+    let mut now_s = 0.0;
+    let mut first = 0;
+    for (tuning, factor) in
+        [(Tuning::Nominal, 1.0), (Tuning::Faster, 1.025), (Tuning::Slower, 0.975), (Tuning::Nominal, 1.0)]
+    {
+        if factor != 1.0 || now_s > 0.0 {
+            let change = tuned.tune(tuning).unwrap();
+            assert_eq!(change.first_sample, first);
+            assert_eq!(change.sample_rate_mhz, (rate * factor * 1e3).round() as u64);
+        }
+        let codes = take(&mut tuned, second * 3 / 4);
+        let nearest = |n: usize| truth[((now_s + n as f64 / (rate * factor)) * rate).round() as usize];
+        let same = codes.iter().enumerate().filter(|&(n, code)| code.abs_diff(nearest(n)) <= 3).count();
+        println!("{tuning:?}: {same} of {} samples the same", codes.len());
+        assert!(same * 100 > codes.len() * 97, "{tuning:?}: {same} of {}", codes.len());
+        now_s += codes.len() as f64 / (rate * factor);
+        first += codes.len() as u64;
+    }
 }
