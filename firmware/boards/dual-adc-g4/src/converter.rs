@@ -1,9 +1,9 @@
 //! Converters 1 and 2 in regular simultaneous mode, triggered by timer 6, emptied by DMA into a ring.
 //!
 //! ```text
-//!  TIM6 update ─► ADC1: leg A (buffer 1), marker A ─┐ 32-bit word   DMA1 ch 1   ring of 4096 words
-//!  250 kHz        ADC2: leg B (buffer 2), marker B ─┴─ CDR ─────────circular──► = 2048 scans, 8.2 ms
-//!  TIM5 counts the same ticks: the clock of the sample index
+//!  TIM6 update ─► ADC1: leg A (buffer 1), marker A ─┐ 32-bit word   DMA1 ch 1   ring of 3072 words
+//!  250 kHz        ADC2: leg B (buffer 2), marker B ─┴─ CDR ─────────circular──► = 1536 scans, 6.1 ms
+//!  TIM5 counts ticks of the same clock: that of the sample index
 //! ```
 //! Registers: reference manual RM0440, from memory and from the register crate; not verified on a chip.
 //! In dual mode the first converter's reading is the low half of the common data word, so one word cannot
@@ -12,6 +12,8 @@
 use core::sync::atomic::{AtomicU32, Ordering, fence};
 use legwise_firmware::sampling::circular::CircularConverter;
 use legwise_firmware::sampling::counter::Extension;
+use legwise_firmware::sampling::tick_clock::TickClock;
+use legwise_firmware::source::Tuning;
 use stm32g4xx_hal::pac::{self, adc1};
 use stm32g4xx_hal::rcc::Rcc;
 
@@ -20,11 +22,20 @@ pub const CORE_HZ: u32 = 170_000_000;
 /// Ticks of the timer clock per pair: 250 000 pairs per second. The converters would do twice that, the
 /// core would not: README.md, "How fast".
 const TICKS_PER_PAIR: u32 = 680;
+/// Fewer and more ticks by 2.5 %, for a look at the pair at other rates.
+const TICKS_FASTER: u32 = TICKS_PER_PAIR - 17;
+const TICKS_SLOWER: u32 = TICKS_PER_PAIR + 17;
+/// Ticks before a trigger from which on its period is left alone: time to write it is needed.
+const TICKS_TO_WRITE: u32 = 60;
 /// Pairs per second, in millihertz.
-pub const SAMPLE_RATE_MHZ: u64 = CORE_HZ as u64 * 1_000 / TICKS_PER_PAIR as u64;
+pub const SAMPLE_RATE_MHZ: u64 = rate_mhz(TICKS_PER_PAIR);
 
-/// Words of the ring: eight blocks of 256 pairs.
-const RING_WORDS: usize = 4_096;
+const fn rate_mhz(ticks_per_pair: u32) -> u64 {
+    CORE_HZ as u64 * 1_000 / ticks_per_pair as u64
+}
+
+/// Words of the ring: six blocks of 256 pairs.
+const RING_WORDS: usize = 3_072;
 /// Written by the DMA channel, read by [`DualConverter::word`] only. Atomics, because another master
 /// writes them: each read really reads.
 static RING: [AtomicU32; RING_WORDS] = [const { AtomicU32::new(0) }; RING_WORDS];
@@ -36,7 +47,7 @@ const MARKER_A_CHANNEL: u8 = 6; // PC0
 const MARKER_B_CHANNEL: u8 = 7; // PC1
 
 // Converter clock: core / 4 = 42.5 MHz. Leg 47.5 + 12.5, marker 6.5 + 12.5 clocks: 79 of the 170 per pair.
-const _: () = assert!(4 * (47 + 12 + 6 + 12 + 2) < TICKS_PER_PAIR);
+const _: () = assert!(4 * (47 + 12 + 6 + 12 + 2) < TICKS_FASTER);
 const _: () = assert!(CORE_HZ % TICKS_PER_PAIR == 0 && RING_WORDS < 65_536);
 
 /// Request line of converter 1 at the DMA multiplexer.
@@ -74,6 +85,7 @@ pub struct DualConverter {
 pub struct RunningConverter {
     parts: DualConverter,
     elapsed: Extension<32>,
+    instants: TickClock,
 }
 
 impl DualConverter {
@@ -87,7 +99,7 @@ impl DualConverter {
         self.start_buffers();
         self.start_converters();
         self.start_timers();
-        RunningConverter { parts: self, elapsed: Extension::new() }
+        RunningConverter { parts: self, elapsed: Extension::new(), instants: TickClock::new(TICKS_PER_PAIR) }
     }
 
     /// Followers: PA1 to converter 1, PB0 to converter 2, both inside the chip. The divider's 8.9 kohm
@@ -115,16 +127,18 @@ impl DualConverter {
         self.adc2.cfgr().modify(|_, w| w.ovrmod().preserve());
     }
 
-    /// The trigger once per pair, and a counter that counts as often, from the same clock.
+    /// The trigger once per pair, its period taken over at each; and a counter of the same ticks, which wraps
+    /// after 25 s and is read far more often.
     fn start_timers(&self) {
         let (trigger, clock) = (&self.trigger, &self.clock);
         // SAFETY: any 16-bit period and prescaler, any 32-bit period is valid; this value owns the timers.
         unsafe {
             trigger.arr().write(|w| w.bits(TICKS_PER_PAIR - 1));
-            clock.psc().write(|w| w.bits(TICKS_PER_PAIR - 1));
+            clock.psc().write(|w| w.bits(0));
             clock.arr().write(|w| w.bits(u32::MAX));
         }
         trigger.cr2().modify(|_, w| w.mms().update());
+        trigger.cr1().modify(|_, w| w.arpe().enabled());
         // The prescaler is taken over at an update.
         clock.egr().write(|w| w.ug().set_bit());
         trigger.cr1().modify(|_, w| w.cen().set_bit());
@@ -208,6 +222,13 @@ impl RunningConverter {
     }
 }
 
+impl RunningConverter {
+    /// Ticks since power-on.
+    fn ticks(&mut self) -> u64 {
+        self.elapsed.extend(u64::from(self.parts.clock.cnt().read().bits()))
+    }
+}
+
 impl CircularConverter for RunningConverter {
     type Word = u32;
 
@@ -226,7 +247,8 @@ impl CircularConverter for RunningConverter {
     }
 
     fn elapsed_scans(&mut self) -> u64 {
-        self.elapsed.extend(u64::from(self.parts.clock.cnt().read().bits()))
+        let ticks = self.ticks();
+        self.instants.scans(ticks)
     }
 
     fn has_failed(&mut self) -> bool {
@@ -243,10 +265,30 @@ impl CircularConverter for RunningConverter {
         let before = self.elapsed_scans();
         let mut now = before;
         wait_until(|| {
-            now = self.elapsed.extend(u64::from(self.parts.clock.cnt().read().bits()));
+            now = self.elapsed_scans();
             now != before
         });
         self.start();
         now + 1
+    }
+
+    fn tune(&mut self, tuning: Tuning) -> Option<(u64, u64)> {
+        let ticks_per_pair = match tuning {
+            Tuning::Nominal => TICKS_PER_PAIR,
+            Tuning::Faster => TICKS_FASTER,
+            Tuning::Slower => TICKS_SLOWER,
+        };
+        let first = cortex_m::interrupt::free(|_| {
+            // Not while a trigger is about to come: it would be unclear which period follows it.
+            let mut ticks = self.ticks();
+            wait_until(|| {
+                ticks = self.ticks();
+                self.instants.ticks_left(ticks) > TICKS_TO_WRITE
+            });
+            // SAFETY: any 16-bit period is valid; this value owns the timer, which takes it at its next update.
+            unsafe { self.parts.trigger.arr().write(|w| w.bits(ticks_per_pair - 1)) };
+            self.instants.change(ticks, ticks_per_pair)
+        });
+        Some((first, rate_mhz(ticks_per_pair)))
     }
 }
