@@ -15,6 +15,7 @@ use legwise_protocol::power;
 
 pub mod average;
 pub mod conversion;
+pub mod families;
 pub mod lines;
 pub mod rung;
 
