@@ -10,7 +10,9 @@ use families::source::{Coupled, Source, bridge};
 use families::{Averages, densities, samples};
 use legwise::spectrum::families::ladder::Ladder;
 use legwise::spectrum::families::presence::presence;
-use legwise::spectrum::families::{AliasState, Hints, Member, Mode, SourceName, name, name_at_two_rates};
+use legwise::spectrum::families::{
+    AliasState, Hints, MODES, Member, Mode, SourceName, name, name_at_two_rates,
+};
 use legwise_tests::waveforms::dice;
 
 /// Kind, cases put together from components, cases through samples.
@@ -140,7 +142,7 @@ fn line_amplitudes_are_right_within_two_thousandths_from_2_hz_to_two_fifths_of_t
     for tones_hz in rows {
         let averages = averages_of_tones(tones_hz, 500_000.0, 5.5);
         let ladder = Ladder::quiet(&averages);
-        for mode in Mode::BOTH {
+        for mode in MODES {
             let lines = ladder.lines(mode);
             let found: Vec<f64> = lines.iter().map(|line| line.line.frequency_hz).collect();
             assert_eq!(lines.len(), tones_hz.len(), "{mode:?}: {found:?} for {tones_hz:?}");
@@ -218,7 +220,7 @@ fn presence_tells_share_and_limits_and_bridges_a_single_miss() {
 
     let found = presence(of(SourceName::Drive), &sequence);
     assert_eq!((found.looks, found.seen, found.filled), (60, 35, 1), "{found:?}");
-    assert!((found.share - 35.0 / 60.0).abs() < 1e-9);
+    assert!((found.share() - 35.0 / 60.0).abs() < 1e-9);
     let limits: Vec<(u64, u64)> =
         found.stretches.iter().map(|stretch| (stretch.start_sample, stretch.end_sample)).collect();
     assert_eq!(limits, [(10 * span, 30 * span), (45 * span, 60 * span)]);
@@ -227,7 +229,7 @@ fn presence_tells_share_and_limits_and_bridges_a_single_miss() {
     assert_eq!(found.stretches[1].end_resolution_samples, None, "the end of the record is no stop");
 
     let found = presence(of(SourceName::Mains), &sequence);
-    assert!((found.share - 1.0).abs() < 1e-9 && found.stretches.len() == 1, "{found:?}");
+    assert!((found.share() - 1.0).abs() < 1e-9 && found.stretches.len() == 1, "{found:?}");
     assert_eq!(found.stretches[0].start_resolution_samples, None);
 }
 

@@ -41,6 +41,7 @@ mod traffic;
 
 pub use alias::AliasState;
 pub use evidence::{Evidence, Fact};
+pub use legwise_protocol::message::Mode;
 
 use spots::Spot;
 
@@ -51,19 +52,8 @@ const MOST_MAINS: usize = 2;
 /// Families named at most; what is left then is the weakest.
 const MOST_FAMILIES: usize = 32;
 
-/// Which combination of the legs.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, PartialOrd, Ord)]
-pub enum Mode {
-    /// Mean of the legs.
-    Common,
-    /// Difference of the legs.
-    Differential,
-}
-
-impl Mode {
-    /// Both.
-    pub const BOTH: [Mode; 2] = [Mode::Common, Mode::Differential];
-}
+/// Both modes.
+pub const MODES: [Mode; 2] = [Mode::Common, Mode::Differential];
 
 /// A value per mode.
 #[derive(Clone, Copy, Debug, Default, PartialEq)]

@@ -144,6 +144,9 @@ fn grow(free: &Free, (number, order): (usize, u32), rate_hz: f64) -> Option<Comb
         let sides = comb.sidebands.numbers().filter_map(|number| free.get(number));
         comb.score += sides.map(|spot| follow::merit(spot, 0.3)).sum::<f64>();
         comb.satellites = around::thicket(free, &comb, rate_hz, is_left);
+        let mut far = around::far_sidebands(free, &comb, level_v, rate_hz, is_left);
+        far.retain(|number| !comb.satellites.contains(number));
+        comb.satellites.extend(far);
     }
     Some(comb)
 }

@@ -9,7 +9,7 @@
 //! the line's mirror image at negative frequencies limits (2.5e-4 at bin 4), above, that at half the rate.
 
 use super::super::lines::{Line, LineMethod, Outside, Section, find_in};
-use super::super::rung::{RungSpectra, SegmentSet};
+use super::super::rung::{RUNG_RATIO, RungSpectra, SegmentSet};
 use super::super::{BLANKED_BINS, HANN_ENBW_BINS};
 use super::Mode;
 use std::borrow::Cow;
@@ -17,8 +17,6 @@ use std::f64::consts::PI;
 
 /// Lines per rung and mode.
 const MOST_LINES: usize = 64;
-/// Decimation between rungs.
-const DECIMATION: f64 = 8.0;
 /// Power that may leak through the decimators: −80 dB, what their design promises.
 const LEAK: f64 = 1e-8;
 /// A line must exceed a leak by this power ratio: 6 dB.
@@ -31,7 +29,7 @@ const FEW_MARGIN_DB: f64 = 2.5;
 /// Two finds within this share of the coarser rung's bin are one line.
 const SAME_BINS: f64 = 0.3;
 /// Bins around a known frequency that its floor is taken from ...
-const FLOOR_BINS: usize = 32;
+pub(super) const FLOOR_BINS: usize = 32;
 /// ... without those that are its own.
 const OWN_BINS: usize = 3;
 
@@ -116,7 +114,7 @@ impl<'a> Ladder<'a> {
 
     /// Rate of the samples, Hz.
     pub fn full_rate_hz(&self) -> Option<f64> {
-        self.rungs.first().map(|spectra| spectra.rate_hz * DECIMATION.powi(spectra.rung.into()))
+        self.rungs.first().map(|spectra| spectra.rate_hz * RUNG_RATIO.powi(spectra.rung.into()))
     }
 
     /// The lines of one mode, lowest frequency first.
@@ -170,14 +168,23 @@ impl<'a> Ladder<'a> {
 }
 
 /// The searched part of an average.
-pub(super) fn section(spectra: &RungSpectra, mode: Mode) -> Section<'static> {
-    let value = |bin: &super::super::rung::RungBin| match mode {
-        Mode::Common => bin.common,
-        Mode::Differential => bin.differential,
-    };
+fn section(spectra: &RungSpectra, mode: Mode) -> Section<'static> {
+    section_of(spectra, mode, 0..=usize::MAX)
+}
+
+/// Those bins of an average that lie within `bins`.
+pub(super) fn section_of(
+    spectra: &RungSpectra,
+    mode: Mode,
+    bins: std::ops::RangeInclusive<usize>,
+) -> Section<'static> {
+    let first_bin = spectra.first_bin.max(*bins.start());
+    let skipped = first_bin - spectra.first_bin;
+    let kept = bins.end().saturating_sub(first_bin).saturating_add(1);
+    let values = spectra.bins.iter().skip(skipped).take(kept).map(|bin| bin.of(mode));
     Section {
-        first_bin: spectra.first_bin,
-        v2_per_hz: Cow::Owned(spectra.bins.iter().map(value).collect()),
+        first_bin,
+        v2_per_hz: Cow::Owned(values.collect()),
         bin_hz: spectra.bin_hz(),
         segments: spectra.effective_segments(),
         half_rate_bin: spectra.points as usize / 2,
@@ -213,6 +220,15 @@ pub(super) fn known_level(section: &Section<'_>, frequency_hz: f64) -> Option<Kn
         rms_v: (excess * HANN_ENBW_BINS * section.bin_hz / shape).sqrt(),
         above_floor_db: 10.0 * (highest / floor.max(f64::MIN_POSITIVE)).log10(),
     })
+}
+
+/// Least level that [`known_level`] finds on a bin, V rms; `None` where the section does not hold the bin and
+/// both beside it.
+pub(super) fn detectable(section: &Section<'_>, bin: usize) -> Option<f64> {
+    section.get(bin.checked_sub(1)?).and(section.get(bin + 1))?;
+    let density = section.line_ratio(4.0) * quarter_floor(section, bin);
+    // Half way between two bins the window shows 0.72 of the power it shows on one.
+    Some((density * HANN_ENBW_BINS * section.bin_hz / window_power(0.5)).sqrt())
 }
 
 /// Lower quartile of the density around a bin: a floor that a comb of lines four bins apart leaves alone.

@@ -26,6 +26,8 @@ const ORDERS: u32 = 50;
 const FUNDAMENTAL_SCORE: f64 = 3.0;
 /// See above.
 const LEAST_SCORE: f64 = 3.0;
+/// Harmonics missing in a row that end them: a rectifier of twelve pulses leaves ten out.
+const MISSES: u32 = 12;
 /// Harmonics at least this many bins apart are measured.
 const APART_BINS: f64 = 3.2;
 /// From this order on a harmonic is not stronger than the strongest from a third of its order up, with a margin.
@@ -96,6 +98,9 @@ pub(super) fn take(ladder: &Ladder<'_>, free: &mut Free) -> Option<Family> {
     let mut members: Vec<(u32, Member, f64)> = Vec::new();
     let mut taken = Vec::new();
     for order in 1..=ORDERS {
+        if members.last().is_some_and(|(last, ..)| order > last + MISSES) {
+            break;
+        }
         let limit_v = level_limit(&members, order);
         let spot = grid.spot(free, order).filter(|(number, spot)| {
             let apart_hz = (spot.frequency_hz - f64::from(order) * grid.fundamental_hz).abs();

@@ -23,6 +23,12 @@ const ALIKE: f64 = 2.0;
 const SINGLE_SHARES: (f64, f64, f64) = (0.3, 0.15, 0.08);
 /// Output frequency whose sidebands are allowed for, Hz: those of multiple `m` reach `π/2·m` of it and a few.
 pub(super) const FASTEST_HZ: f64 = 60.0;
+/// Least uncertainty of a line beside others, bins.
+const OWN_BINS: f64 = 0.02;
+/// Multiples of the output frequency at which weak lines are taken for sidebands at most ...
+const FARTHEST: f64 = 99.0;
+/// ... and how far off their place they may be, in output frequencies: the places are six apart.
+const FAR_REACH: f64 = 0.5;
 /// Output frequencies, Hz.
 const OUTPUTS_HZ: (f64, f64) = (2.0, 200.0);
 
@@ -35,6 +41,8 @@ pub(super) struct Side {
     distance_hz: f64,
     tolerance_hz: f64,
     is_paired: bool,
+    /// Half the distance to its counterpart and the uncertainty of that, Hz.
+    pair_hz: (f64, f64),
 }
 
 /// What stands beside the multiples.
@@ -107,7 +115,13 @@ fn side(number: usize, spot: &Spot, multiple: u32, place_hz: f64, uncertainty_hz
             + 0.1 * spot.bin_hz
             + f64::from(multiple) * uncertainty_hz,
         is_paired: false,
+        pair_hz: (0.0, f64::INFINITY),
     }
+}
+
+/// Uncertainty of a line that others shift a little.
+fn own_hz(spot: &Spot) -> f64 {
+    spot.uncertainty_hz.max(OWN_BINS * spot.bin_hz)
 }
 
 /// Marks those that have a counterpart of about the same level on the other side.
@@ -126,8 +140,15 @@ fn pair(free: &Free, mut near: Vec<Side>, found: &mut Sidebands) {
         });
         if let Some(partner) = partner {
             found.pairs += 1;
-            for place in [upper, partner] {
-                near.get_mut(place).into_iter().for_each(|side| side.is_paired = true);
+            let half_hz = near.get(partner).map_or(0.0, |other| (one.distance_hz - other.distance_hz) / 2.0);
+            let both = [Some(one.number), near.get(partner).map(|other| other.number)];
+            let within_hz = both.into_iter().flatten().filter_map(|number| free.get(number)).map(own_hz);
+            let pair_hz = (half_hz, within_hz.sum::<f64>() / 2.0);
+            for side in [upper, partner] {
+                near.get_mut(side).into_iter().for_each(|side| {
+                    side.is_paired = true;
+                    side.pair_hz = pair_hz;
+                });
             }
         }
     }
@@ -148,10 +169,10 @@ fn outputs(side: &Side, output_hz: f64) -> Option<i32> {
         .then_some(outputs as i32)
 }
 
-/// The output frequency that most pairs fit; of equals the highest.
+/// The output frequency that most pairs fit, of equals the highest, refined over all of them.
 fn output(sides: &[Side]) -> Option<(f64, f64)> {
     let paired = || sides.iter().filter(|side| side.is_paired && side.distance_hz > 0.0);
-    let mut best: Option<(usize, f64, f64)> = None;
+    let mut best: Option<(usize, f64)> = None;
     for side in paired() {
         for order in [3, 6, 9, 12] {
             let output_hz = side.distance_hz / f64::from(order);
@@ -159,12 +180,36 @@ fn output(sides: &[Side]) -> Option<(f64, f64)> {
                 continue;
             }
             let fitting = paired().filter(|other| outputs(other, output_hz).is_some()).count();
-            if best.is_none_or(|best| (fitting, output_hz) > (best.0, best.1)) {
-                best = Some((fitting, output_hz, side.tolerance_hz / f64::from(order)));
+            if best.is_none_or(|best| (fitting, output_hz) > best) {
+                best = Some((fitting, output_hz));
             }
         }
     }
-    best.map(|(_, output_hz, uncertainty_hz)| (output_hz, uncertainty_hz))
+    let (_, output_hz) = best?;
+    // Half the distance between the two of a pair does not depend on the carrier.
+    let (mut sum, mut weights) = (0.0, 0.0);
+    for side in paired() {
+        let Some(order) = outputs(side, output_hz).map(f64::from) else { continue };
+        let weight = (order / side.pair_hz.1).powi(2);
+        sum += weight * side.pair_hz.0 / order;
+        weights += weight;
+    }
+    (weights > 0.0).then(|| (sum / weights, weights.sqrt().recip()))
+}
+
+/// Whether a weak line fits sidebands further out than pairs were looked for: of the multiples below and above it,
+/// or of none.
+pub(super) fn is_far(spot: &Spot, (carrier_hz, carrier_within_hz): (f64, f64), output: (f64, f64)) -> bool {
+    let below = (spot.frequency_hz / carrier_hz).floor().max(0.0) as u32;
+    [0, below, below + 1].into_iter().any(|multiple| {
+        let times = f64::from(multiple);
+        let distance_hz = spot.frequency_hz - times * carrier_hz;
+        let order = (distance_hz / output.0).round();
+        let reach_hz = spot.tolerance_hz() + times * carrier_within_hz + order.abs() * output.1;
+        order.abs() <= FARTHEST
+            && is_allowed(multiple, order as i32)
+            && (distance_hz - order * output.0).abs() <= reach_hz.min(FAR_REACH * output.0)
+    })
 }
 
 fn label(found: &mut Sidebands) {

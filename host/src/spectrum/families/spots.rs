@@ -6,12 +6,14 @@
 //! of the differential one and the two are coherent (`|S_cd|²/(S_cc·S_dd) ≥ 1/2`), or where it is so far below
 //! that an imbalance of a few per cent accounts for it: a thousandth, a hundredth and more where the line is
 //! ragged, a tenth where the segments are too few to tell coherence. Where both is so it is data: drivers that come and
-//! go step the common mode, too.
+//! go step the common mode, too. Below the mains the rhythm of the messages is all there is to expect. There a
+//! driven spot is data where it is broad, as pauses and replies of varying length make it, or where the
+//! differential mode has it at more than half the common mode's level: a pair does not convert that much.
 
 use super::super::rung::{RungSpectra, SegmentSet};
 use super::alias::{AliasState, Sighting};
 use super::ladder::{Ladder, LadderLine};
-use super::{Levels, Member, Mode, PerMode, Role};
+use super::{Levels, MODES, Member, PerMode, Role};
 
 /// Lines of the two modes this close, in bins, are one spot.
 const SAME_BINS: f64 = 0.5;
@@ -21,6 +23,10 @@ const FEWEST_FOR_COHERENCE: f64 = 4.0;
 const SURE_DB: f64 = 18.0;
 /// From this rung on the coming and going of messages makes lines of its own.
 const RAGGED_FROM_RUNG: u8 = 2;
+/// Below this the rhythm of messages makes lines, Hz: the mains lie above.
+const RHYTHM_BELOW_HZ: f64 = 45.0;
+/// Most common mode there over the differential mode, as a power ratio.
+const RHYTHM_RATIO: f64 = 4.0;
 /// Least uncertainty between two measurements of a steady line, bins: sources wander a little.
 const STEADY_BINS: f64 = 0.1;
 /// Uncertainty of the centre of a summed band: this many bins and this share of its spread.
@@ -166,7 +172,7 @@ impl Free {
 /// The spots of a ladder, lowest frequency first.
 pub(super) fn gather(ladder: &Ladder<'_>) -> Vec<Spot> {
     let mut spots: Vec<Spot> = Vec::new();
-    for mode in Mode::BOTH {
+    for mode in MODES {
         for line in ladder.lines(mode) {
             match spots.iter_mut().find(|spot| is_same(spot, &line)) {
                 Some(spot) => merge(spot, &line),
@@ -221,6 +227,10 @@ fn is_data(spot: &Spot, spectra: &RungSpectra) -> bool {
         (bin.cross.0.powi(2) + bin.cross.1.powi(2)) / (bin.common * bin.differential).max(f64::MIN_POSITIVE);
     let tells = spectra.effective_segments() >= FEWEST_FOR_COHERENCE;
     let is_coherent = tells && coherence >= 0.5;
+    if spectra.rung >= RAGGED_FROM_RUNG && spot.frequency_hz < RHYTHM_BELOW_HZ {
+        let is_in_both = spot.levels.differential.is_some() && ratio < RHYTHM_RATIO;
+        return spot.is_smeared() || spot.levels.common.is_none() || is_in_both;
+    }
     // What data leave is ragged: of few segments it has maxima of its own.
     let is_doubtful = spot.is_summed() || spot.above_floor_db < SURE_DB;
     let weak = match (tells, is_doubtful) {

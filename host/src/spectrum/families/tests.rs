@@ -220,7 +220,7 @@ fn nothing_at_all_has_no_families_and_no_presence() {
     let lines = [(Mode::Common, 66_000.0, 0.1)];
     let family = &name(&rungs(SegmentSet::Idle, &lines), &Hints::default())[0];
     let found = presence(family, &[]);
-    assert_eq!((found.looks, found.share, found.stretches.len()), (0, 0.0, 0));
+    assert_eq!((found.looks, found.share(), found.stretches.len()), (0, 0.0, 0));
     let found = presence(family, &rungs(SegmentSet::Idle, &[]));
     assert_eq!((found.looks, found.seen), (1, 0));
 }

@@ -20,6 +20,8 @@ const SHAPE_RUNGS: u8 = 2;
 const MOST_LINES: usize = 16;
 /// Decision level of a receiver, V (TIA/EIA-485-A): data are larger.
 const DECISION_V: f64 = 0.2;
+/// Most common mode that data make, as a share of the differential mode's power: one leg alone.
+const MOST_COMMON: f64 = 0.25;
 /// Bins averaged into a point of the shape, by rung: zeros of slow data are twenty bins apart in rung 0.
 const POINT_BINS: [usize; 2] = [3, 2];
 
@@ -52,11 +54,7 @@ pub(super) fn take(rungs: &[RungSpectra], free: &mut Free, hints: &Hints) -> Opt
 
 /// Median over the bins of a rung.
 fn median(spectra: &RungSpectra, mode: Mode) -> f64 {
-    let value = |bin: &super::super::rung::RungBin| match mode {
-        Mode::Common => bin.common,
-        Mode::Differential => bin.differential,
-    };
-    let mut values: Vec<f64> = spectra.bins.iter().map(value).collect();
+    let mut values: Vec<f64> = spectra.bins.iter().map(|bin| bin.of(mode)).collect();
     let middle = values.len() / 2;
     if values.is_empty() { 0.0 } else { *values.select_nth_unstable_by(middle, f64::total_cmp).1 }
 }
@@ -179,7 +177,8 @@ fn member(line: &LadderLine, character_hz: Option<f64>) -> Member {
 }
 
 /// What is spread over the band: all power of the differential mode without the lines, and the part of the
-/// common mode that is coherent with it, `|S_cd|²/S_dd` less its bias of `S_cc/n`.
+/// common mode that is coherent with it, `|S_cd|²/S_dd` less its bias of `S_cc/n`. One leg alone makes `S_dd/4`:
+/// where more is coherent, a source of common mode is.
 fn rest(driven: &Ladder<'_>, lines: &[Member]) -> Member {
     let listed: f64 = lines.iter().filter_map(|line| line.levels.differential).map(|v| v * v).sum();
     let mut common = 0.0;
@@ -187,7 +186,9 @@ fn rest(driven: &Ladder<'_>, lines: &[Member]) -> Member {
         let n = spectra.effective_segments().max(1.0);
         for bin in spectra.bins.iter().filter(|bin| bin.differential > 0.0) {
             let coherent = (bin.cross.0.powi(2) + bin.cross.1.powi(2)) / bin.differential;
-            common += (coherent - bin.common / n).max(0.0) * spectra.bin_hz();
+            if coherent <= MOST_COMMON * bin.differential {
+                common += (coherent - bin.common / n).max(0.0) * spectra.bin_hz();
+            }
         }
     }
     let half_hz = driven.full_rate_hz().unwrap_or(0.0) / 4.0;

@@ -13,6 +13,8 @@ const OWN_SHARES: (f64, f64) = (0.02, 0.9);
 const PAIR_SHARE: f64 = 0.1;
 /// A narrow line is within a smear by chance; it may have this share of the smeared one's level.
 const NARROW_SHARE: f64 = 0.03;
+/// A sideband far out has at most this share of the carrier's level.
+const FAR_SHARE: f64 = 0.01;
 /// Where sidebands meet the floor itself is theirs and hides some: multiples of the carrier to the next known.
 const THICKET_REACH: f64 = 6.0;
 
@@ -89,6 +91,26 @@ pub(super) fn satellites(
         .filter(|&(number, spot)| is_left(number) && is_one(spot) && !is_own(number, spot))
         .map(|(number, _)| number)
         .collect()
+}
+
+/// Weak lines at sidebands far out, once the output frequency is known.
+pub(super) fn far_sidebands(
+    free: &Free,
+    comb: &Comb,
+    level_v: f64,
+    rate_hz: f64,
+    is_left: impl Fn(usize) -> bool,
+) -> Vec<usize> {
+    let Some(output) = comb.sidebands.output_hz else { return Vec::new() };
+    let carrier = (comb.fundamental_hz, comb.uncertainty_hz);
+    let is_one = |number: usize, spot: &Spot| {
+        is_left(number)
+            && !comb.sidebands.has(number)
+            && spot.levels.larger_v() <= FAR_SHARE * level_v
+            && sidebands::is_far(spot, carrier, output)
+            && !has_comb(free, number, rate_hz, &is_left)
+    };
+    free.iter().filter(|&(number, spot)| is_one(number, spot)).map(|(number, _)| number).collect()
 }
 
 /// What stands between high multiples of a carrier, where the sidebands of neighbours meet: outwards from the
