@@ -46,13 +46,7 @@ pub(crate) fn statements(
     if let Some(rate_hz) = rate_hz {
         statements.extend(of_sampling(rate_hz));
     }
-    if spectrum.common.is_some() || spectrum.differential.is_some() {
-        statements.push(
-            "Spectra are of one sample rate: any line may be a folded image of one above half the rate, so none is \
-             confirmed. A second recording at another rate would tell."
-                .to_string(),
-        );
-    }
+    statements.extend(of_aliases(spectrum));
     statements.extend(of_the_point(recording));
     statements.extend(of_lost_time(coverage));
     statements.extend(of_the_converter(recording, judgement));
@@ -80,6 +74,22 @@ fn of_sampling(rate_hz: f64) -> [String; 2] {
             figures::share(meets(rate_hz)),
         ),
     ]
+}
+
+fn of_aliases(spectrum: &Spectra) -> Option<String> {
+    if spectrum.common.is_none() && spectrum.differential.is_none() {
+        return None;
+    }
+    Some(match spectrum.second_rate_hz {
+        None => "Spectra are of one sample rate: any line may be a folded image of one above half the rate, so none \
+                 is confirmed. A second recording at another rate would tell."
+            .to_string(),
+        Some(second_hz) => format!(
+            "Lines were checked against folded images by spectra at {}. One that is not confirmed changed meanwhile, \
+             or was too weak or too wide to tell.",
+            figures::pair_rate(second_hz)
+        ),
+    })
 }
 
 fn of_the_point(recording: &Recording) -> Vec<String> {

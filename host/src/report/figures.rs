@@ -76,6 +76,22 @@ pub fn decibels(level: f64) -> String {
     format!("{level:.1} dB")
 }
 
+/// A ratio of voltages: `50.1 mV/V (-26.0 dB)`.
+pub fn ratio(ratio: f64) -> String {
+    format!("{}/V ({:.1} dB)", volts(ratio), 20.0 * ratio.log10())
+}
+
+/// An uncertainty of an angle: `±2.1 deg`, two significant digits.
+pub fn uncertainty_degrees(degrees: f64) -> String {
+    format!("±{} deg", significant(degrees, 2))
+}
+
+/// A bit rate: `19.200 kbit/s`; five digits.
+pub fn bit_rate(bits_per_s: f64) -> String {
+    let (value, unit) = prefixed(bits_per_s, &[(1e6, "Mbit/s"), (1e3, "kbit/s"), (1.0, "bit/s")]);
+    format!("{} {unit}", significant(value, 5))
+}
+
 /// A noise density: `1.250 µV/√Hz`.
 pub fn noise_density(v_per_rthz: f64) -> String {
     scaled(v_per_rthz, &[(1.0, "V/√Hz"), (1e-3, "mV/√Hz"), (1e-6, "µV/√Hz"), (1e-9, "nV/√Hz")])

@@ -1,22 +1,21 @@
-//! The spectral part: averages what is stored and lists the strongest lines of all rungs.
+//! The spectral lines: the strongest of all rungs, of both sets of segments together.
 //!
 //! Each rung of the ladder is searched on its own. Where two overlap, the lower one tells up to 0.35 of its
 //! rate and the higher one from there on; a line that shows in both near the crossover is the lower
 //! rung's, whose bins are finer. Logs of devices of wire version 1 hold the full rate only.
 
-use super::ReportError;
+use super::averages::Single;
 use super::figures::rounded_volts;
-use super::model::{ModeSpectrum, RungSpectrum, Spectra, SpectralLine};
-use super::runs::{Run, count};
-use crate::log::spectra;
-use crate::spectrum::average::{RungAverages, RungMean};
+use super::model::{ModeSpectrum, RungSpectrum, Source, SourceLine, SpectralLine};
+use crate::spectrum::average::RungMean;
+use crate::spectrum::families::PerMode;
 use crate::spectrum::lines::{Line, LineMethod, find};
-use crate::spectrum::rung::RUNG_RATIO;
-use crate::spectrum::{BLANKED_BINS, Density, HANN_ENBW_BINS, PowerTable, SpectrumAverage};
+use crate::spectrum::{BLANKED_BINS, Density, HANN_ENBW_BINS};
 use legwise_protocol::message::Mode;
-use rusqlite::Connection;
-use std::collections::BTreeMap;
 use std::ops::Range;
+
+/// The spectrum of each mode, where there is one.
+pub(crate) type ModeSpectra = PerMode<Option<ModeSpectrum>>;
 
 /// Lines listed per mode.
 pub(crate) const LINES: usize = 8;
@@ -69,14 +68,8 @@ impl Band {
     }
 }
 
-/// Averages all spectra.
-pub(crate) fn read(connection: &Connection, runs: &[Run]) -> Result<Spectra, ReportError> {
-    let single: u64 = connection.query_row("SELECT count(*) FROM spectrum", [], |row| count(row, 0))?;
-    let (ladder, left_out) = read_ladder(connection)?;
-    if ladder.is_empty() {
-        let spectra = read_single(connection, runs)?;
-        return Ok(Spectra { left_out: spectra.left_out + left_out, ..spectra });
-    }
+/// The spectra of both modes over the rungs of the ladder, both sets together.
+pub(crate) fn of_ladder(ladder: &[RungMean]) -> ModeSpectra {
     let of = |mode| {
         let band = |rung: &RungMean| {
             let mean = &rung.mean;
@@ -86,93 +79,24 @@ pub(crate) fn read(connection: &Connection, runs: &[Run]) -> Result<Spectra, Rep
         };
         mode_spectrum(&ladder.iter().map(band).collect::<Vec<_>>())
     };
-    Ok(Spectra {
-        common: of(Mode::Common),
-        differential: of(Mode::Differential),
-        left_out: left_out + single,
-    })
+    PerMode { common: of(Mode::Common), differential: of(Mode::Differential) }
 }
 
-/// Means of all rungs, both sets together, the full rate first, and how many stored spectra are not in them.
-/// Where sample rates differ, the one with most segments is taken, and of each rung the shape with most.
-fn read_ladder(connection: &Connection) -> Result<(Vec<RungMean>, u64), ReportError> {
-    let (mut averages, mut stored) = (RungAverages::new(), 0_u64);
-    let passed_over = spectra::visit(connection, |_, spectra| {
-        stored += 1;
-        averages.add(spectra);
-        Ok::<(), ReportError>(())
-    })?;
-    let sample_rate =
-        |mean: &RungMean| (mean.mean.rate_hz * RUNG_RATIO.powi(mean.mean.rung.into())).to_bits();
-    let mut by_rate: BTreeMap<u64, (u64, BTreeMap<u8, RungMean>)> = BTreeMap::new();
-    for mean in averages.both_sets() {
-        let (segments, rungs) = by_rate.entry(sample_rate(&mean)).or_default();
-        *segments += mean.mean.segments;
-        let is_better = |old: &RungMean| old.mean.segments >= mean.mean.segments;
-        if !rungs.get(&mean.mean.rung).is_some_and(is_better) {
-            rungs.insert(mean.mean.rung, mean);
-        }
-    }
-    let best = by_rate.into_values().max_by_key(|(segments, _)| *segments);
-    let rungs: Vec<RungMean> = best.map(|(_, rungs)| rungs.into_values().collect()).unwrap_or_default();
-    let used: u64 = rungs.iter().map(|rung| rung.spectra).sum();
-    Ok((rungs, stored + passed_over - used))
-}
-
-/// Spectra of one shape: rate and points per segment, then mode.
-type Shape = (u64, u32);
-
-#[derive(Default)]
-struct Shaped {
-    /// Common, then differential; with the segments passed over.
-    modes: [Option<(SpectrumAverage, u64)>; 2],
-    spectra: u64,
-    segments: u64,
-}
-
-/// Averages the spectra of single modes, at rung 0. Where shapes differ, the one with most segments is taken.
-fn read_single(connection: &Connection, runs: &[Run]) -> Result<Spectra, ReportError> {
-    let table = PowerTable::new();
-    let mut shapes: BTreeMap<Shape, Shaped> = BTreeMap::new();
-    let (mut stored, mut last_run) = (0_u64, None);
-    let mut statement = connection
-        .prepare("SELECT run, mode, points, segments, skipped, codes FROM spectrum WHERE rung = 0")?;
-    let mut rows = statement.query([])?;
-    while let Some(row) = rows.next()? {
-        stored += 1;
-        let run: i64 = row.get(0)?;
-        if last_run.is_none_or(|(number, _)| number != run) {
-            let rate = runs.iter().find(|facts| facts.number == run).and_then(|run| run.rate_mhz);
-            last_run = Some((run, rate));
-        }
-        let Some((_, Some(rate_mhz))) = last_run else {
-            continue;
-        };
-        let (mode, points, segments): (i64, u32, u32) = (row.get(1)?, row.get(2)?, row.get(3)?);
-        let codes = row.get_ref(5)?.as_blob().map_err(rusqlite::Error::from)?;
-        let shaped = shapes.entry((rate_mhz, points)).or_default();
-        let Some(slot) = usize::try_from(mode).ok().and_then(|mode| shaped.modes.get_mut(mode)) else {
-            continue;
-        };
-        let rate_hz = rate_mhz as f64 / 1000.0;
-        let (average, skipped) = slot.get_or_insert_with(|| (SpectrumAverage::new(points, rate_hz), 0));
-        if average.add(&table, codes, segments) {
-            *skipped += count(row, 4)?;
-            shaped.spectra += 1;
-            shaped.segments += u64::from(segments);
-        }
-    }
-    let Some(best) = shapes.into_values().max_by_key(|shaped| shaped.segments) else {
-        return Ok(Spectra { common: None, differential: None, left_out: stored });
-    };
-    let of = |mode: &Option<(SpectrumAverage, u64)>| {
-        let (average, skipped) = mode.as_ref()?;
-        let density = average.density()?;
+/// The spectra of both modes from one density each, at rung 0.
+pub(crate) fn of_single(modes: &PerMode<Option<Single>>) -> ModeSpectra {
+    let of = |single: &Option<Single>| {
+        let single = single.as_ref()?;
+        let density = single.density.clone();
         let published = 0..density.v2_per_hz.len();
-        mode_spectrum(&[Band { rung: 0, density, published, spectra: average.spectra(), skipped: *skipped }])
+        mode_spectrum(&[Band {
+            rung: 0,
+            density,
+            published,
+            spectra: single.spectra,
+            skipped: single.skipped,
+        }])
     };
-    let [common, differential] = &best.modes;
-    Ok(Spectra { common: of(common), differential: of(differential), left_out: stored - best.spectra })
+    PerMode { common: of(&modes.common), differential: of(&modes.differential) }
 }
 
 /// The spectrum of one mode from its rungs, the highest rate first; `None` when there are none.
@@ -259,6 +183,19 @@ fn lines(bands: &[Band], crossovers: &[f64]) -> Vec<SpectralLine> {
     kept.sort_by(|a, b| b.line.amplitude_v.total_cmp(&a.line.amplitude_v));
     let rung = |one: &Found| bands.get(one.band).map_or(0, |band| band.rung);
     kept.into_iter().take(LINES).map(|one| spectral_line(&one.line, rung(one))).collect()
+}
+
+/// Gives each line the alias state of the source's line it is.
+pub(crate) fn mark_aliases(mode: &mut ModeSpectrum, sources: &[Source]) {
+    for line in &mut mode.lines {
+        let bin_hz = mode.rungs.iter().find(|rung| rung.rung == line.rung).map_or(0.0, |rung| rung.bin_hz);
+        let apart_hz = |of_source: &SourceLine| (of_source.frequency_hz - line.frequency_hz).abs();
+        let of_sources = sources.iter().flat_map(|source| &source.lines);
+        let nearest = of_sources.min_by(|a, b| apart_hz(a).total_cmp(&apart_hz(b)));
+        if let Some(nearest) = nearest.filter(|nearest| apart_hz(nearest) <= bin_hz / 2.0) {
+            line.alias = nearest.alias;
+        }
+    }
 }
 
 fn rung_spectrum(band: &Band, from_hz: f64, to_hz: f64) -> RungSpectrum {

@@ -1,4 +1,4 @@
-//! What a log says: verdict, margins, excursions, levels, lines, and what could not be seen.
+//! What a log says: verdict, margins, excursions, levels, sources of disturbance, and what could not be seen.
 //!
 //! Everything is computed from the stored tables, so that a report can be made again, years later,
 //! and says the same. [`Report::from_log`] computes; [`text::render`] draws for a terminal and
@@ -8,16 +8,22 @@
 //!  tables ─ runs ─┬─ account ──┐
 //!                 ├─ excursions ┼─ margins ─ verdict ─ reason ─┐
 //!                 ├─ coverage ──┘                              ├─ Report ─ text | json
-//!                 └─ levels (bias) · lines · blind ────────────┘
+//!                 ├─ levels (bias) · blind ─────────────────────┤
+//!                 └─ averages ─ lines · sources · conversion ───┘
 //! ```
 
 use crate::log::{Log, LogError};
+use crate::spectrum::conversion::ConversionFloor;
 use jiff::tz::TimeZone;
+use rusqlite::Connection;
 
 mod account;
+mod averages;
 mod bias;
 mod blind;
+mod conversion;
 mod coverage;
+mod evidence;
 mod excursions;
 pub mod figures;
 pub mod json;
@@ -27,6 +33,7 @@ mod margins;
 pub mod model;
 mod reason;
 mod runs;
+mod sources;
 pub mod text;
 mod times;
 pub mod verdict;
@@ -43,12 +50,14 @@ pub struct Options {
     pub list_limit: usize,
     /// Zone of local times.
     pub zone: TimeZone,
+    /// The board's own conversion, where it was measured: nothing below it is claimed.
+    pub floor: Option<ConversionFloor>,
 }
 
 impl Default for Options {
-    /// 10 000 entries; the zone of this computer.
+    /// 10 000 entries; the zone of this computer; the board's own conversion not known.
     fn default() -> Self {
-        Self { list_limit: 10_000, zone: TimeZone::system() }
+        Self { list_limit: 10_000, zone: TimeZone::system(), floor: None }
     }
 }
 
@@ -100,7 +109,7 @@ fn assemble(log: &Log, options: &Options) -> Result<Report, ReportError> {
     let recording = coverage::recording(connection, &account, &runs, &calendar)?;
     let reason = reason::sentence(&margins, &account, &rules);
     let levels = levels::read(connection, rules.receiver)?;
-    let spectrum = lines::read(connection, &runs)?;
+    let spectrum = spectrum(connection, &runs, &calendar, options)?;
     let blind = blind::statements(&recording, &coverage, &margins, &spectrum);
     Ok(Report {
         schema: model::SCHEMA,
@@ -119,6 +128,36 @@ fn assemble(log: &Log, options: &Options) -> Result<Report, ReportError> {
         spectrum,
         blind,
         cautions: blind::CAUTIONS.to_vec(),
+    })
+}
+
+/// The spectral part.
+fn spectrum(
+    connection: &Connection,
+    runs: &[runs::Run],
+    calendar: &Calendar<'_>,
+    options: &Options,
+) -> Result<model::Spectra, ReportError> {
+    let averages = averages::read(connection, runs)?;
+    let mut modes = if averages.is_single() {
+        lines::of_single(&averages.single)
+    } else {
+        lines::of_ladder(&averages.together)
+    };
+    let (sources, sources_not_listed) = sources::read(connection, &averages, calendar, options.list_limit)?;
+    for mode in [&mut modes.common, &mut modes.differential].into_iter().flatten() {
+        lines::mark_aliases(mode, &sources);
+    }
+    let [conversion, driver_imbalance] = conversion::read(&averages, options.floor.as_ref());
+    Ok(model::Spectra {
+        common: modes.common,
+        differential: modes.differential,
+        left_out: averages.left_out,
+        second_rate_hz: averages.second_rate_hz,
+        sources,
+        sources_not_listed,
+        conversion,
+        driver_imbalance,
     })
 }
 

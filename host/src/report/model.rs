@@ -8,8 +8,10 @@ use super::verdict::Verdict;
 use serde::Serialize;
 
 mod findings;
+mod spectra;
 
 pub use findings::*;
+pub use spectra::*;
 
 /// Name and version of this layout.
 pub const SCHEMA: &str = "legwise-report/1";
@@ -43,7 +45,7 @@ pub struct Report {
     pub excursions: Excursions,
     /// Signal levels and what they say about bias and termination.
     pub levels: Levels,
-    /// Strongest lines of both modes.
+    /// Spectra of both modes, the sources in them, conversion.
     pub spectrum: Spectra,
     /// What could not be seen.
     pub blind: Blind,

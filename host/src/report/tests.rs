@@ -8,9 +8,11 @@ use legwise_protocol::message::Totals;
 use legwise_protocol::receivers::ReceiverId;
 
 pub(crate) mod fixture;
+mod ladder;
 mod lines;
 mod long;
 mod schema;
+mod sources;
 
 fn verdict_of(receiver: ReceiverId, totals: &Totals) -> Verdict {
     Fixture::single(receiver, totals).report().verdict

@@ -9,6 +9,7 @@ use super::Verdict;
 mod findings;
 pub(crate) mod layout;
 mod panels;
+mod spectra;
 
 /// Whether the text may carry terminal colours.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
@@ -67,7 +68,7 @@ pub fn render(report: &Report, style: Style) -> String {
         ("Margins", panels::margins(report)),
         ("Excursions", findings::excursions(report)),
         ("Levels", findings::levels(report)),
-        ("Strongest lines", findings::lines(report)),
+        ("Sources in the spectrum", spectra::sources(report)),
         ("What could not be seen", findings::blind(report)),
         ("Before acting on this", findings::cautions(report)),
     ];

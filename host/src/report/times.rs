@@ -20,6 +20,11 @@ impl<'a> Calendar<'a> {
         self.runs.iter().find(|run| run.number == number)
     }
 
+    /// Pairs per second of a run.
+    pub(crate) fn rate_hz(&self, run: i64) -> Option<f64> {
+        self.run(run).and_then(Run::rate_hz)
+    }
+
     /// The moment of `sample` in `run`; it is known to lie within `within_samples` from there on.
     pub(crate) fn moment(&self, run: i64, sample: u64, within_samples: u64) -> Moment {
         let facts = self.run(run);

@@ -1,4 +1,4 @@
-//! The parts of the report that describe the signal: excursions, levels, lines, blind spots.
+//! The parts of the report that describe the signal: excursions, levels, blind spots.
 
 use super::Moment;
 use serde::Serialize;
@@ -149,90 +149,6 @@ pub struct BiasCandidate {
     pub expected_cm_v: f64,
     /// How far the level seen lies from it, as a share of it.
     pub deviation_share: f64,
-}
-
-/// Averaged spectra of both modes: idle and driven segments together.
-#[derive(Clone, Debug, Serialize)]
-pub struct Spectra {
-    /// The common mode.
-    pub common: Option<ModeSpectrum>,
-    /// The differential mode.
-    pub differential: Option<ModeSpectrum>,
-    /// Stored spectra left out because they are of another rate, length or kind.
-    pub left_out: u64,
-}
-
-/// The averaged spectrum of one mode. Its first keys are of the highest rate.
-#[derive(Clone, Debug, Serialize)]
-pub struct ModeSpectrum {
-    /// Stored spectra averaged.
-    pub spectra: u64,
-    /// Segments in them.
-    pub segments: u64,
-    /// Segments passed over meanwhile to save time.
-    pub skipped_segments: u64,
-    /// Points per segment.
-    pub points: u32,
-    /// Distance between bins, Hz.
-    pub bin_hz: f64,
-    /// Noise bandwidth of a bin, Hz.
-    pub noise_bandwidth_hz: f64,
-    /// Noise floor (from the median of all bins), V/√Hz.
-    pub noise_floor_v_per_rthz: f64,
-    /// Rungs of the decimation ladder, the full rate first.
-    pub rungs: Vec<RungSpectrum>,
-    /// What lies below this frequency is not resolved, Hz.
-    pub unresolved_below_hz: f64,
-    /// What lies there, V rms (the mean of each segment left out).
-    pub unresolved_rms_v: f64,
-    /// Strongest lines, largest first.
-    pub lines: Vec<SpectralLine>,
-}
-
-/// One rung of the decimation ladder in the spectrum of one mode.
-#[derive(Clone, Debug, PartialEq, Serialize)]
-pub struct RungSpectrum {
-    /// Its number; 0 is the full rate.
-    pub rung: u8,
-    /// Its rate: pairs per second / 8^`rung`, Hz.
-    pub rate_hz: f64,
-    /// Points per segment.
-    pub points: u32,
-    /// Distance between bins, Hz.
-    pub bin_hz: f64,
-    /// Lowest frequency it tells: below, the next rung does, Hz.
-    pub from_hz: f64,
-    /// Highest frequency it tells, Hz.
-    pub to_hz: f64,
-    /// Stored spectra averaged.
-    pub spectra: u64,
-    /// Segments in them.
-    pub segments: u64,
-    /// Segments passed over meanwhile to save time.
-    pub skipped_segments: u64,
-    /// Noise floor (from the median of its bins), V/√Hz.
-    pub noise_floor_v_per_rthz: f64,
-}
-
-/// One spectral line.
-#[derive(Clone, Debug, PartialEq, Serialize)]
-pub struct SpectralLine {
-    /// Frequency, Hz.
-    pub frequency_hz: f64,
-    /// Its uncertainty without that of the sample clock, Hz.
-    pub frequency_uncertainty_hz: f64,
-    /// Peak amplitude, V.
-    pub amplitude_v: f64,
-    /// V rms.
-    pub rms_v: f64,
-    /// Height over the local floor, dB.
-    pub above_floor_db: f64,
-    /// Rung of the ladder that shows it.
-    pub rung: u8,
-    /// `interpolated`, or `band-power` where lines crowd, are wide or lie at the edge of the band.
-    pub method: &'static str,
-    /// `not-confirmed`: seen at one sample rate only, so it may be an alias.
-    pub alias: &'static str,
 }
 
 /// What could not be seen.

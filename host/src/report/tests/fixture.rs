@@ -282,7 +282,7 @@ impl Fixture {
 
 /// Options with a fixed zone, one hour east.
 pub fn options(list_limit: usize) -> Options {
-    Options { list_limit, zone: TimeZone::fixed(Offset::constant(1)) }
+    Options { list_limit, zone: TimeZone::fixed(Offset::constant(1)), floor: None }
 }
 
 fn legs_json() -> String {

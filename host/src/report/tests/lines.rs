@@ -1,7 +1,6 @@
 //! The spectral part of the report: which rung tells which line.
 
 use super::fixture::*;
-use crate::report::text::{self, Style};
 use legwise_protocol::receivers::ReceiverId;
 
 /// Three rungs; bins up to 0.4 of each rung's rate, from where the next one below reaches 0.3 of its own.
@@ -22,16 +21,6 @@ fn lines_of_all_rungs_are_listed_with_their_rung() {
     // 100 kHz or so at the full rate, 6.1 kHz on the middle rung, 53 Hz on the lowest.
     ladder(&fixture, "idle", 100, [(205, 0.5), (100, 0.25), (7, 1.0)]);
     let report = fixture.report();
-    let text = text::render(&report, Style::PLAIN);
-    println!("{text}");
-    for words in
-        ["0 Hz to 2.7344 kHz: bins 7.6294 Hz apart", "21.875 kHz to 250.00 kHz: bins 488.28 Hz apart"]
-    {
-        assert!(
-            text.split_whitespace().collect::<Vec<_>>().join(" ").contains(words),
-            "{words} not in {text}"
-        );
-    }
     let spectrum = report.spectrum;
     assert_eq!(spectrum.left_out, 0);
     for (mode, share) in [(spectrum.common.unwrap(), 1.0), (spectrum.differential.unwrap(), 0.01)] {

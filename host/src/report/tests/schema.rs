@@ -1,8 +1,10 @@
 //! `SCHEMA.md` against what is emitted: same keys, same types, nothing missing on either side.
 
-use super::fixture::night;
+use super::fixture::{night, options};
+use super::ladder::night_of_ladder;
 use crate::receiver_table;
-use crate::report::json;
+use crate::report::{Options, Report, json};
+use crate::spectrum::conversion::{ConversionFloor, FloorPoint};
 use serde_json::Value;
 use std::collections::{BTreeMap, BTreeSet};
 
@@ -77,8 +79,20 @@ fn check_object(
 fn schema_page_and_emitted_keys_are_the_same() {
     let schema = schema();
     let mut filled = BTreeSet::new();
-    let report = json::value(&night().report()).unwrap();
-    check(&schema, "`report`", &report, "report", &mut filled);
+    for fixture in [night(), night_of_ladder()] {
+        let report = json::value(&fixture.report()).unwrap();
+        check(&schema, "`report`", &report, "report", &mut filled);
+    }
+    let floor = FloorPoint {
+        frequency_hz: 4_000.0,
+        real: 0.01,
+        imaginary: 0.0,
+        radius: 0.001,
+        common_noise_v2_per_hz: None,
+    };
+    let with_floor = Options { floor: ConversionFloor::new(vec![floor]).ok(), ..options(10) };
+    let report = Report::from_log(&night_of_ladder().log, &with_floor).unwrap();
+    check(&schema, "`report`", &json::value(&report).unwrap(), "report", &mut filled);
     let receivers: Value = serde_json::from_str(&receiver_table::json(None).unwrap()).unwrap();
     check(&schema, "`receivers`", &receivers, "receivers", &mut filled);
     let documented: BTreeSet<(String, String)> = schema

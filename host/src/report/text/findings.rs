@@ -1,10 +1,10 @@
-//! Panels on the signal itself: excursions, levels, lines, blind spots, cautions.
+//! Panels on the signal itself: excursions, levels, blind spots, cautions.
 
 use super::layout::{Align, fitting_table, item, labelled, paragraph, table};
 use super::panels::{has_runs, moment_short};
 use crate::report::Report;
 use crate::report::figures;
-use crate::report::model::{ExcursionEntry, LevelSpread, ModeSpectrum};
+use crate::report::model::{ExcursionEntry, LevelSpread};
 
 /// Exact totals and the entries furthest out.
 pub(super) fn excursions(report: &Report) -> String {
@@ -200,97 +200,6 @@ fn bias(report: &Report) -> String {
     if let Some(hint) = &levels.driven_hint {
         text.push_str(&paragraph(hint));
     }
-    text
-}
-
-/// Strongest lines of both modes.
-pub(super) fn lines(report: &Report) -> String {
-    let spectrum = &report.spectrum;
-    if spectrum.common.is_none() && spectrum.differential.is_none() {
-        return paragraph("No spectra are in the log.");
-    }
-    let mut text = String::new();
-    if let Some(mode) = &spectrum.common {
-        text.push_str(&mode_lines("common mode", mode));
-    }
-    if let Some(mode) = &spectrum.differential {
-        text.push_str(&mode_lines("differential", mode));
-    }
-    if spectrum.left_out > 0 {
-        let value = figures::counted(spectrum.left_out, "spectrum", "spectra");
-        text.push_str(&labelled("left out", &format!("{value} of another rate, length or kind")));
-    }
-    text
-}
-
-fn mode_lines(name: &str, mode: &ModeSpectrum) -> String {
-    let value = format!(
-        "noise floor {}; {} below {} (not resolved, mean left out)",
-        figures::noise_density(mode.noise_floor_v_per_rthz),
-        figures::volts(mode.unresolved_rms_v),
-        figures::hertz(mode.unresolved_below_hz),
-    );
-    let mut text = labelled(name, &value);
-    if mode.lines.is_empty() {
-        text.push_str(&paragraph("No line stands 10 dB out of the floor around it."));
-    } else {
-        let rows: Vec<Vec<String>> = mode
-            .lines
-            .iter()
-            .map(|line| {
-                vec![
-                    figures::hertz(line.frequency_hz),
-                    figures::uncertainty_hertz(line.frequency_uncertainty_hz),
-                    figures::volts(line.amplitude_v),
-                    figures::volts(line.rms_v),
-                    figures::decibels(line.above_floor_db),
-                    if line.method == "interpolated" {
-                        String::new()
-                    } else {
-                        "summed over its band".to_string()
-                    },
-                ]
-            })
-            .collect();
-        let columns = [
-            ("frequency", Align::Right),
-            ("", Align::Right),
-            ("peak", Align::Right),
-            ("rms", Align::Right),
-            ("over floor", Align::Right),
-            ("", Align::Left),
-        ];
-        text.push_str(&table(&columns, &rows));
-    }
-    let averaged = |spectra, segments, skipped| {
-        format!(
-            "{} in {} averaged, {}",
-            figures::counted(segments, "segment", "segments"),
-            figures::counted(spectra, "spectrum", "spectra"),
-            if skipped == 0 { "50 % overlap" } else { "some segments passed over" },
-        )
-    };
-    let how = if mode.rungs.len() > 1 {
-        let rungs = mode.rungs.iter().rev().map(|rung| {
-            format!(
-                "{} to {}: bins {} apart, {}",
-                figures::hertz(rung.from_hz),
-                figures::hertz(rung.to_hz),
-                figures::hertz(rung.bin_hz),
-                averaged(rung.spectra, rung.segments, rung.skipped_segments)
-            )
-        });
-        format!("Hann window, {} points. {}", mode.points, rungs.collect::<Vec<_>>().join("; "))
-    } else {
-        format!(
-            "Hann window, {} points, {}; bins {} apart, noise bandwidth {}",
-            mode.points,
-            averaged(mode.spectra, mode.segments, mode.skipped_segments),
-            figures::hertz(mode.bin_hz),
-            figures::hertz(mode.noise_bandwidth_hz),
-        )
-    };
-    text.push_str(&paragraph(&format!("{how}; not confirmed against aliases.")));
     text
 }
 

@@ -52,6 +52,11 @@ pub(crate) fn item(text: &str) -> String {
     wrap("  -", INDENT + 2, text)
 }
 
+/// What belongs to the line above it.
+pub(crate) fn detail(text: &str) -> String {
+    wrap("", 2 * INDENT, text)
+}
+
 /// A label and its value.
 pub(crate) fn labelled(label: &str, value: &str) -> String {
     wrap(&format!("{:INDENT$}{label}", ""), VALUE_COLUMN, value)

@@ -55,6 +55,24 @@ pub(super) fn moment_short(moment: &Moment, has_runs: bool) -> String {
     )
 }
 
+/// The same to the second, for what is known no better.
+pub(super) fn moment_rough(moment: &Moment, has_runs: bool) -> String {
+    if let Some((date, time)) = moment.local.as_deref().and_then(date_and_time) {
+        return format!("{} {}", date.get(5..).unwrap_or(date), time.get(..8).unwrap_or(time));
+    }
+    let run = if has_runs { format!("run {}: ", moment.run) } else { String::new() };
+    moment.seconds.map_or_else(
+        || format!("{run}sample {}", figures::count(moment.sample)),
+        |seconds| {
+            if seconds < 120.0 {
+                format!("{run}{seconds:.0} s")
+            } else {
+                format!("{run}{}", figures::span(seconds))
+            }
+        },
+    )
+}
+
 pub(super) fn has_runs(report: &Report) -> bool {
     report.recording.runs.len() > 1
 }

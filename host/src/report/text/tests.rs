@@ -94,7 +94,7 @@ fn all_sections_are_there_in_order() {
         "── Margins ─",
         "── Excursions ─",
         "── Levels ─",
-        "── Strongest lines ─",
+        "── Sources in the spectrum ─",
         "── What could not be seen ─",
         "── Before acting on this ─",
     ] {
