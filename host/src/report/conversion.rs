@@ -3,12 +3,12 @@
 //! The statistics are those of [`crate::spectrum::conversion`]; here is chosen what is shown. Nothing below
 //! the board's own conversion is claimed, and where that is not known the report says so.
 //!
-//! What drivers make of their data is told from segments no longer than a message or so, those of rungs 0 and
-//! 1. In longer ones messages come and go, and every driver that takes over steps the common mode to its own:
-//! that hangs together with the data as well, and is no imbalance.
+//! What drivers make of their data is told from the shortest segments, those of the full rate. In longer ones
+//! messages come and go, and every driver that takes over steps the common mode to its own: that hangs together
+//! with the data as well, and is no imbalance.
 
 use super::averages::Averages;
-use super::figures::{hertz, ratio, uncertainty_degrees};
+use super::figures::{hertz, ratio, uncertainty_degrees, volts};
 use super::model::{Conversion, ConversionPoint};
 use crate::spectrum::conversion::{
     self, Coding, ConversionFloor, Direction, Input, LimitReason, Point, PointKind, Record, Refusal,
@@ -17,8 +17,8 @@ use crate::spectrum::conversion::{
 
 /// Places shown.
 const POINTS: usize = 5;
-/// The last rung that tells imbalance of the drivers.
-const LAST_IMBALANCE_RUNG: u8 = 1;
+/// The rung that tells imbalance of the drivers: the full rate.
+const IMBALANCE_RUNG: u8 = 0;
 /// An upper limit above this tells nothing: -20 dB. A single wire makes 2.
 const TELLING_LIMIT: f64 = 0.1;
 /// Two places of one curve closer than this share of their frequency tell the same.
@@ -38,7 +38,7 @@ pub(crate) fn read(averages: &Averages, floor: Option<&ConversionFloor>) -> [Con
         (Direction::DriverImbalance, conversion::driver_imbalance(&input, &settings)),
     ];
     curves.map(|(direction, mut curve)| {
-        curve.retain(|point| direction == Direction::Conversion || point.rung <= LAST_IMBALANCE_RUNG);
+        curve.retain(|point| direction == Direction::Conversion || point.rung == IMBALANCE_RUNG);
         summary(&curve, direction, floor.is_some(), averages.is_single())
     })
 }
@@ -51,10 +51,11 @@ fn summary(curve: &[Point], direction: Direction, is_board_known: bool, is_singl
     let mut limits: Vec<(&Point, f64)> =
         curve.iter().filter_map(|point| Some((point, limit(point)?))).collect();
     limits.sort_by(|a, b| a.1.total_cmp(&b.1));
-    let finding = match (significant.is_empty(), limits.is_empty()) {
+    let is_telling = limits.first().is_some_and(|limit| limit.1 <= TELLING_LIMIT);
+    let finding = match (significant.is_empty(), is_telling) {
         (false, _) => "significant",
-        (true, false) => "upper-limit",
-        (true, true) => "not-known",
+        (true, true) => "upper-limit",
+        (true, false) => "not-known",
     };
     let chosen = if significant.is_empty() {
         apart(limits.iter().map(|limit| limit.0))
@@ -64,7 +65,8 @@ fn summary(curve: &[Point], direction: Direction, is_board_known: bool, is_singl
     let points: Vec<ConversionPoint> = chosen.into_iter().map(point).collect();
     let text = match points.first() {
         Some(first) if finding == "significant" => value(first),
-        Some(first) => upper_limit(first, &limits, direction),
+        Some(first) if is_telling => upper_limit(first, &limits),
+        Some(first) => high_limit(first, direction),
         None => unknown(curve, direction, is_single),
     };
     Conversion {
@@ -139,8 +141,9 @@ fn value(point: &ConversionPoint) -> String {
     let low = point.magnitude_low.filter(|low| *low > 0.0).map_or("-".to_string(), decibels);
     let high = point.magnitude_high.map_or("?".to_string(), decibels);
     format!(
-        "{} (95 %: {low} to {high} dB) at {}, phase {:.0} deg {}",
-        ratio(magnitude),
+        "{}/V, {} dB (95 %: {low} to {high} dB) at {}, {:.0} deg {}",
+        volts(magnitude),
+        decibels(magnitude),
         hertz(point.frequency_hz),
         point.phase_deg.unwrap_or(0.0),
         uncertainty_degrees(point.phase_uncertainty_deg.unwrap_or(180.0)),
@@ -152,30 +155,28 @@ fn decibels(magnitude: f64) -> String {
 }
 
 /// The sentence on upper limits, lowest first.
-fn upper_limit(first: &ConversionPoint, limits: &[(&Point, f64)], direction: Direction) -> String {
-    let lowest = first.magnitude_high.unwrap_or(f64::INFINITY);
-    if lowest > TELLING_LIMIT {
-        let lacking = match direction {
-            Direction::Conversion => "too little common mode while the bus rests",
-            Direction::DriverImbalance => "too little data while the bus is driven",
-        };
-        return format!(
-            "not known: {lacking} (no more than {} at {})",
-            ratio(lowest),
-            hertz(first.frequency_hz)
-        );
-    }
+fn upper_limit(first: &ConversionPoint, limits: &[(&Point, f64)]) -> String {
     let telling = || limits.iter().filter(|limit| limit.1 <= TELLING_LIMIT).map(|limit| limit.0.frequency_hz);
     let (low_hz, high_hz) = (telling().fold(f64::INFINITY, f64::min), telling().fold(0.0, f64::max));
     format!(
         "none seen: below {} at {}, below {} from {} to {}{}",
-        ratio(lowest),
+        ratio(first.magnitude_high.unwrap_or(f64::INFINITY)),
         hertz(first.frequency_hz),
         ratio(TELLING_LIMIT),
         hertz(low_hz),
         hertz(high_hz),
         reason(first.verdict),
     )
+}
+
+/// The sentence where even the lowest upper limit is high.
+fn high_limit(first: &ConversionPoint, direction: Direction) -> String {
+    let lacking = match direction {
+        Direction::Conversion => "too little common mode while the bus rests",
+        Direction::DriverImbalance => "too little data while the bus is driven",
+    };
+    let limit = ratio(first.magnitude_high.unwrap_or(f64::INFINITY));
+    format!("not known: {lacking} (no more than {limit} at {})", hertz(first.frequency_hz))
 }
 
 fn reason(verdict: &str) -> &'static str {
@@ -195,13 +196,18 @@ fn unknown(curve: &[Point], direction: Direction, is_single: bool) -> String {
     let has = |is_it: fn(&Refusal) -> bool| {
         curve.iter().any(|point| matches!(&point.verdict, Verdict::Refused(refusal) if is_it(refusal)))
     };
-    let text = if has(|refusal| matches!(refusal, Refusal::OtherDirection)) {
+    let is_conversion = direction == Direction::Conversion;
+    let text = if curve.is_empty() {
+        "not known: the log holds no spectra"
+    } else if has(|refusal| matches!(refusal, Refusal::OtherDirection)) {
         "not known: what the modes share comes the other way"
     } else if has(|refusal| matches!(refusal, Refusal::NoiseOnly)) {
-        "not known: the mode it would come from shows nothing but the board's noise"
-    } else if curve.is_empty() {
-        "not known: the log holds no spectra"
-    } else if direction == Direction::Conversion {
+        if is_conversion {
+            "not known: the common mode may be the board's own noise"
+        } else {
+            "not known: the common mode holds too much that is not from the data"
+        }
+    } else if is_conversion {
         "not known: the pair rested too seldom; try a longer recording"
     } else {
         "not known: the pair was driven too seldom; try a longer recording"

@@ -21,7 +21,7 @@ pub struct Spectra {
     pub sources_not_listed: u64,
     /// Common to differential mode, from idle segments.
     pub conversion: Conversion,
-    /// Differential to common mode, from driven segments.
+    /// Differential to common mode, from driven segments at the full rate.
     pub driver_imbalance: Conversion,
 }
 
@@ -115,7 +115,8 @@ pub struct Source {
     pub output_hz: Option<f64>,
     /// Its uncertainty, Hz.
     pub output_uncertainty_hz: Option<f64>,
-    /// All its lines together in the common mode, V rms; `null` where none stands out.
+    /// All its lines together in the common mode, V rms, averaged over the whole time; `null` where none stands
+    /// out.
     pub common_rms_v: Option<f64>,
     /// The same in the differential mode.
     pub differential_rms_v: Option<f64>,
@@ -197,7 +198,7 @@ pub struct PresenceStretch {
 /// What one mode makes in the other.
 #[derive(Clone, Debug, PartialEq, Serialize)]
 pub struct Conversion {
-    /// `significant`, `upper-limit` or `not-known`.
+    /// `significant`, `upper-limit` (below 0.1 V/V somewhere) or `not-known`.
     pub finding: &'static str,
     /// In words.
     pub text: String,

@@ -117,7 +117,7 @@ fn conversion_is_claimed_with_a_region_that_holds_it() {
     }
     assert_eq!(report.spectrum.driver_imbalance.finding, "not-known", "nobody drove");
     let text = panel(&report);
-    assert!(text.contains("run legwise trim") && text.contains("mV/V (-2"), "{text}");
+    assert!(text.contains("run legwise trim") && text.contains("mV/V, -2"), "{text}");
 }
 
 #[test]

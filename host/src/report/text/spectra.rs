@@ -30,8 +30,8 @@ pub(super) fn sources(report: &Report) -> String {
         let weaker = figures::counted(hidden as u64, "weaker source", "weaker sources");
         text.push_str(&paragraph(&format!("and {weaker}: see the JSON form.")));
     }
-    text.push_str(&labelled("CM makes DM", &spectrum.conversion.text));
-    text.push_str(&labelled("drivers make CM", &spectrum.driver_imbalance.text));
+    text.push_str(&labelled("common to diff.", &spectrum.conversion.text));
+    text.push_str(&labelled("data to common", &spectrum.driver_imbalance.text));
     text.push_str(&notes(spectrum));
     text
 }
@@ -54,7 +54,7 @@ fn listed(shown: &[&Source], is_checked: bool, has_runs: bool) -> String {
         ("at", Align::Left),
         ("common", Align::Right),
         ("differential", Align::Right),
-        ("bus", Align::Left),
+        ("bus was", Align::Left),
         ("sure", Align::Right),
     ];
     let rows: Vec<Vec<String>> = shown.iter().map(row).collect();

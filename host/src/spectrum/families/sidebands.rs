@@ -23,6 +23,8 @@ const ALIKE: f64 = 2.0;
 const SINGLE_SHARES: (f64, f64, f64) = (0.3, 0.15, 0.08);
 /// Output frequency whose sidebands are allowed for, Hz: those of multiple `m` reach `π/2·m` of it and a few.
 pub(super) const FASTEST_HZ: f64 = 60.0;
+/// A pair tells the output frequency where its distance is known within this share.
+const SHARP_SHARE: f64 = 0.1;
 /// Least uncertainty of a line beside others, bins.
 const OWN_BINS: f64 = 0.02;
 /// Multiples of the output frequency at which weak lines are taken for sidebands at most ...
@@ -171,7 +173,9 @@ fn outputs(side: &Side, output_hz: f64) -> Option<i32> {
 
 /// The output frequency that most pairs fit, of equals the highest, refined over all of them.
 fn output(sides: &[Side]) -> Option<(f64, f64)> {
-    let paired = || sides.iter().filter(|side| side.is_paired && side.distance_hz > 0.0);
+    // Bands that hold several sidebands tell nothing.
+    let is_sharp = |side: &&Side| side.pair_hz.1 <= SHARP_SHARE * side.pair_hz.0;
+    let paired = || sides.iter().filter(|side| side.is_paired && side.distance_hz > 0.0).filter(is_sharp);
     let mut best: Option<(usize, f64)> = None;
     for side in paired() {
         for order in [3, 6, 9, 12] {

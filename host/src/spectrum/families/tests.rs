@@ -195,6 +195,41 @@ fn two_networks_and_a_drive_with_sidebands_are_three_families() {
 }
 
 #[test]
+fn weak_lines_where_sidebands_of_a_drive_may_be_are_the_drives() {
+    let place = |(m, n): (i32, i32)| 4_000.0 * f64::from(m) + 100.0 * f64::from(n);
+    let strong = [((1, 0), 0.5), ((2, 3), 0.1), ((2, -3), 0.1), ((3, 0), 0.1)];
+    // Thousandths of the carrier, beyond the reach of pairs: baseband, and far from the second multiple.
+    let weak = [((0, 15), 4e-3), ((2, -27), 4e-3), ((2, 21), 4e-3)];
+    let lines: Vec<(Mode, f64, f64)> =
+        strong.iter().chain(&weak).map(|&(at, v)| (Mode::Common, place(at), v)).collect();
+    let families = name(&rungs(SegmentSet::Idle, &lines), &Hints::default());
+    let [drive] = families.as_slice() else { panic!("{families:?}") };
+    for (at, _) in weak {
+        let is_it = |member: &Member| (member.frequency_hz - place(at)).abs() < 5.0;
+        assert!(drive.members.iter().any(is_it), "{at:?} in {drive:?}");
+    }
+}
+
+#[test]
+fn a_rhythm_below_the_mains_is_the_datas_and_hum_is_not() {
+    let data = |lines: &[(Mode, f64, f64)]| -> Vec<RungSpectra> {
+        let mut both = rungs(SegmentSet::Idle, &[]);
+        both.truncate(2);
+        let mut driven = rungs(SegmentSet::Driven, lines);
+        // 40 dB of data over the floor.
+        driven.iter_mut().flat_map(|spectra| &mut spectra.bins).for_each(|bin| bin.differential += 1e-6);
+        both.append(&mut driven);
+        both
+    };
+    let rhythm = [(Mode::Common, 12.0, 0.05), (Mode::Differential, 12.0, 0.2)];
+    let hum = [(Mode::Common, 50.0, 0.2), (Mode::Common, 150.0, 0.05)];
+    let families = name(&data(&[rhythm, hum].concat()), &Hints::default());
+    let mut names: Vec<SourceName> = families.iter().map(|family| family.source.name()).collect();
+    names.sort_unstable();
+    assert_eq!(names, [SourceName::Mains, SourceName::Traffic], "{families:?}");
+}
+
+#[test]
 fn a_lone_strong_tone_among_the_carriers_is_unknown() {
     let families = name(&rungs(SegmentSet::Idle, &[(Mode::Common, 5_000.0, 0.2)]), &Hints::default());
     assert_eq!(families.len(), 1);
@@ -223,4 +258,61 @@ fn nothing_at_all_has_no_families_and_no_presence() {
     assert_eq!((found.looks, found.share(), found.stretches.len()), (0, 0.0, 0));
     let found = presence(family, &rungs(SegmentSet::Idle, &[]));
     assert_eq!((found.looks, found.seen), (1, 0));
+}
+
+/// One look at a supply, or at nothing, from `first_sample` on.
+fn look(set: SegmentSet, first_sample: u64, is_there: bool) -> RungSpectra {
+    let lines: &[(Mode, f64, f64)] = if is_there { &[(Mode::Common, 66_000.0, 0.1)] } else { &[] };
+    RungSpectra { first_sample, ..rung(0, set, lines) }
+}
+
+fn supply() -> Family {
+    name(&[look(SegmentSet::Idle, 0, true)], &Hints::default()).swap_remove(0)
+}
+
+#[test]
+fn averages_that_share_half_a_segment_are_looks_of_their_own() {
+    // A span of 1 000 000 pairs every 950 000.
+    let sequence: Vec<RungSpectra> =
+        (0..20).map(|number| look(SegmentSet::Idle, 950_000 * number, number < 5)).collect();
+    let found = presence(&supply(), &sequence);
+    assert_eq!((found.looks, found.seen), (20, 5));
+    let stretch = found.stretches[0];
+    assert_eq!((stretch.end_sample, stretch.end_resolution_samples), (4_800_000, Some(1_000_000)));
+}
+
+#[test]
+fn a_look_whose_floor_would_hide_the_line_says_nothing() {
+    let mut driven = look(SegmentSet::Driven, 1_000_000, true);
+    driven.bins.iter_mut().for_each(|bin| bin.common += 1.0);
+    let sequence = [look(SegmentSet::Idle, 0, true), driven, look(SegmentSet::Idle, 2_000_000, true)];
+    let found = presence(&supply(), &sequence);
+    assert_eq!((found.looks, found.seen, found.filled), (2, 2, 0));
+    assert_eq!((found.share(), found.stretches.len()), (1.0, 1));
+}
+
+#[test]
+fn idle_turns_between_driven_ones_are_no_absence_of_data() {
+    let level = Levels { common: None, differential: Some(1.0) };
+    let rest = Member {
+        frequency_hz: 125_000.0,
+        frequency_uncertainty_hz: 125_000.0,
+        role: Role::Structure,
+        levels: level,
+        set: SegmentSet::Driven,
+        rung: 0,
+        alias: AliasState::Unconfirmed,
+    };
+    let certain = vec![Evidence { fact: Fact::DrivenRmsV(1.0), weight: 5.0 }];
+    let data = Family::new(Source::Traffic { frame_bits: None }, (9_600.0, 1.0), vec![rest], certain);
+    let sets = |letters: &str| -> Vec<RungSpectra> {
+        let set = |letter| if letter == 'd' { SegmentSet::Driven } else { SegmentSet::Idle };
+        let looks = letters.chars().zip(0..);
+        looks.map(|(letter, number)| look(set(letter), 1_000_000 * number, false)).collect()
+    };
+    assert_eq!(presence(&data, &sets("ididid")).share(), 1.0);
+    assert_eq!(presence(&data, &sets("dididi")).share(), 1.0);
+    let found = presence(&data, &sets("didiiiididid"));
+    assert_eq!((found.seen, found.stretches.len()), (8, 2), "four idle turns on end: nobody spoke");
+    assert_eq!(presence(&data, &sets("iiii")).share(), 0.0);
 }
