@@ -16,6 +16,7 @@ use legwise_protocol::power;
 pub mod average;
 pub mod conversion;
 pub mod families;
+pub mod ladder;
 pub mod lines;
 pub mod rung;
 

@@ -1,8 +1,11 @@
 //! From errors to a line on the screen and an exit code.
 
+use crate::board_file::BoardFileError;
+use crate::board_file::tied_legs::TiedLegsError;
 use crate::export::ExportError;
 use crate::line::ScenarioError;
 use crate::log::LogError;
+use crate::plot::PlotError;
 use crate::port::PortError;
 use crate::recording::RecordingError;
 use crate::report::ReportError;
@@ -95,6 +98,9 @@ fn sentence(error: &anyhow::Error) -> String {
 
 fn classify(error: &anyhow::Error) -> Exit {
     for cause in error.chain() {
+        if let Some(exit) = cause.downcast_ref().map(of_plot).or(cause.downcast_ref().map(of_board_file)) {
+            return exit;
+        }
         if let Some(error) = cause.downcast_ref::<io::Error>() {
             return match error.kind() {
                 io::ErrorKind::BrokenPipe => Exit::Done,
@@ -117,7 +123,7 @@ fn classify(error: &anyhow::Error) -> Exit {
                 ExportError::Exists { .. } | ExportError::Write { .. } => Exit::Storage,
             };
         }
-        if cause.is::<ReportError>() || cause.is::<ScenarioError>() {
+        if cause.is::<ReportError>() || cause.is::<ScenarioError>() || cause.is::<TiedLegsError>() {
             return Exit::Input;
         }
         if cause.is::<PortError>() {
@@ -128,4 +134,24 @@ fn classify(error: &anyhow::Error) -> Exit {
         }
     }
     Exit::Unexpected
+}
+
+fn of_plot(error: &PlotError) -> Exit {
+    match error {
+        PlotError::UnknownFormat { .. } => Exit::Usage,
+        PlotError::NoSpectra | PlotError::Log(_) | PlotError::Report(_) => Exit::Input,
+        PlotError::Write { .. } => Exit::Storage,
+        PlotError::Picture => Exit::Unexpected,
+    }
+}
+
+fn of_board_file(error: &BoardFileError) -> Exit {
+    match error {
+        BoardFileError::Read { .. }
+        | BoardFileError::Content { .. }
+        | BoardFileError::Points { .. }
+        | BoardFileError::Log(_) => Exit::Input,
+        BoardFileError::IsSidecar { .. } => Exit::Usage,
+        BoardFileError::Exists { .. } | BoardFileError::Write { .. } => Exit::Storage,
+    }
 }

@@ -3,10 +3,12 @@
 //! Exit codes (also in `legwise help`): see [`failure::Exit`].
 
 mod analyse;
+mod calibration;
 mod demo;
 pub mod failure;
 mod live;
 mod night;
+mod plot;
 mod simulate;
 mod stream;
 mod tables;
@@ -34,6 +36,12 @@ With --verdict-code, a finished run also says by its code what was found:
 The monitor is not rated for mains. Clip it to extra-low-voltage signal pairs only; follow the
 site's rules and leave work on live cabinets to people licensed for it.";
 
+const TRIM_HELP: &str = "\
+How: unclip the monitor from the bus and from all plant wiring. Tie both leg clips together, at the
+monitor, to one output of an extra-low-voltage source (a generator or a small isolated supply with
+a signal on it, a few volts at the most), the reference clip to its other one. Log or record a
+minute or more, with a signal at every frequency that matters: noise, a sweep, or many tones.";
+
 /// Finds out whether the wire is to blame: logs and judges a differential bus leg by leg.
 #[derive(Debug, Parser)]
 #[command(name = "legwise", version, after_help = AFTER_HELP, max_term_width = 100)]
@@ -60,6 +68,11 @@ enum Command {
     Receivers(ReceiversArguments),
     /// Write every table of a log as CSV
     Export(ExportArguments),
+    /// Draw the spectra of a log or a recording, and what the pair converts
+    Plot(PlotArguments),
+    /// Measure a board's own conversion, with both its legs tied together
+    #[command(after_help = TRIM_HELP)]
+    Trim(TrimArguments),
 }
 
 /// Machine-readable output.
@@ -139,16 +152,17 @@ struct ReportArguments {
     /// Log file
     log: PathBuf,
     #[command(flatten)]
+    board: BoardArgument,
+    #[command(flatten)]
     json: JsonFlag,
     /// Let the exit code say what was found
     #[arg(long)]
     verdict_code: bool,
 }
 
+/// How a recording is read.
 #[derive(Debug, Args)]
-struct AnalyseArguments {
-    /// Recording: CSV with columns leg_a_v, leg_b_v, or a two-channel WAV
-    recording: PathBuf,
+struct ReadingArguments {
     #[command(flatten)]
     watching: WatchingArguments,
     /// Pairs per second, where the file does not say
@@ -166,6 +180,35 @@ struct AnalyseArguments {
     /// Where on the bus the clip sat, in your own words
     #[arg(long, value_name = "TEXT")]
     point: Option<String>,
+}
+
+impl ReadingArguments {
+    fn open_options(&self) -> OpenOptions {
+        OpenOptions {
+            rate_hz: self.rate,
+            full_scale_v: self.full_scale,
+            skew_ns: self.skew_ns,
+            rails_v: self.rails,
+        }
+    }
+}
+
+/// A file written by `trim`.
+#[derive(Debug, Args)]
+struct BoardArgument {
+    /// What the board itself converts, written by 'legwise trim'
+    #[arg(long, value_name = "BOARD.toml")]
+    board: Option<PathBuf>,
+}
+
+#[derive(Debug, Args)]
+struct AnalyseArguments {
+    /// Recording: CSV with columns leg_a_v, leg_b_v, or a two-channel WAV
+    recording: PathBuf,
+    #[command(flatten)]
+    reading: ReadingArguments,
+    #[command(flatten)]
+    board: BoardArgument,
     /// Keep the log in this file
     #[arg(short, long, value_name = "FILE")]
     output: Option<PathBuf>,
@@ -176,15 +219,30 @@ struct AnalyseArguments {
     verdict_code: bool,
 }
 
-impl AnalyseArguments {
-    fn open_options(&self) -> OpenOptions {
-        OpenOptions {
-            rate_hz: self.rate,
-            full_scale_v: self.full_scale,
-            skew_ns: self.skew_ns,
-            rails_v: self.rails,
-        }
-    }
+#[derive(Debug, Args)]
+struct PlotArguments {
+    /// Log file, or a recording as for 'analyse'
+    #[arg(value_name = "LOG|RECORDING")]
+    input: PathBuf,
+    /// Picture to write, .svg or .png; an older one of this name is replaced
+    #[arg(short, long, value_name = "FILE")]
+    output: PathBuf,
+    #[command(flatten)]
+    board: BoardArgument,
+    #[command(flatten)]
+    reading: ReadingArguments,
+}
+
+#[derive(Debug, Args)]
+struct TrimArguments {
+    /// Log or recording with both legs tied to one source
+    #[arg(value_name = "LOG|RECORDING")]
+    input: PathBuf,
+    /// Board file to write, a new one
+    #[arg(short, long, value_name = "BOARD.toml")]
+    output: PathBuf,
+    #[command(flatten)]
+    reading: ReadingArguments,
 }
 
 #[derive(Debug, Args)]
@@ -244,6 +302,8 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
         Command::Simulate(arguments) => simulate::run(arguments),
         Command::Receivers(arguments) => tables::receivers(arguments),
         Command::Export(arguments) => tables::export(arguments),
+        Command::Plot(arguments) => plot::run(arguments),
+        Command::Trim(arguments) => calibration::trim(arguments),
     };
     match result {
         Ok(exit) => exit.into(),

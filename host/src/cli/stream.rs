@@ -1,11 +1,20 @@
-//! From a board on this machine into a log.
+//! From a board on this machine, or a file, into a log.
 
+use super::{ReadingArguments, terminal};
 use crate::board::VirtualBoard;
 use crate::log::{About, Arrival, Log, LogError, Origin};
+use crate::recording;
 use crate::session::Session;
+use anyhow::Context;
 use legwise_firmware::source::PairSource;
 use legwise_protocol::framing::DeviceFrame;
+use std::io::Read;
 use std::path::Path;
+
+/// Boot id of a recording: there is no device that could draw one.
+const RECORDING_BOOT_ID: u32 = 1;
+/// How every SQLite file begins (*Database File Format*, sqlite.org, section 1.3).
+const DATABASE: &[u8] = b"SQLite format 3\0";
 
 /// What a new log says about itself.
 pub fn about(origin: Origin, origin_name: &str, point: Option<&str>) -> About {
@@ -55,6 +64,54 @@ pub fn run<S: PairSource<Error: std::error::Error + Send + Sync + 'static>>(
             return Ok(());
         }
     }
+}
+
+/// The log in a file, or the log of the recording in it.
+///
+/// # Errors
+/// When it is neither, cannot be read, or breaks off.
+pub fn log_of(path: &Path, reading: &ReadingArguments) -> anyhow::Result<Log> {
+    let mut start = Vec::new();
+    // What cannot be read shows when it is opened as what it seems to be.
+    let is_database = std::fs::File::open(path)
+        .and_then(|file| file.take(DATABASE.len() as u64).read_to_end(&mut start))
+        .is_ok_and(|_| start == DATABASE);
+    if is_database { Ok(Log::open(path)?) } else { analysed(path, reading, None) }
+}
+
+/// The log of a recording that went through the firmware, in the file named or a temporary one.
+///
+/// # Errors
+/// When the recording or the log is not usable; a log that was asked for is kept as far as it came.
+pub fn analysed(path: &Path, reading: &ReadingArguments, output: Option<&Path>) -> anyhow::Result<Log> {
+    let recording = recording::open(path, &reading.open_options())?;
+    let watching = reading.watching.choose(recording.receiver())?;
+    let settings = watching.desktop_settings(recording.describe().sample_rate_mhz);
+    let point = reading.point.as_deref().or(recording.point());
+    let about = about(Origin::Recording, &origin_of(&recording), point);
+    let log = new_log(output, &about)?;
+
+    let bar = terminal::progress_bar(recording.progress().1, "the recording");
+    let mut session = Session::new(log);
+    let mut board = VirtualBoard::new(recording, settings, "desktop", RECORDING_BOOT_ID);
+    let outcome = run(&mut board, &mut session, &mut |_| {}, &mut |source| {
+        bar.set_position(source.progress().0);
+    });
+    bar.finish_and_clear();
+    // A log the user asked for is finished even when the recording breaks off.
+    let log = session.finish()?;
+    outcome.with_context(|| match output {
+        Some(path) => format!("broke off; what came before is kept in {}", path.display()),
+        None => "broke off; 'legwise analyse' with -o keeps what comes before".to_owned(),
+    })?;
+    Ok(log)
+}
+
+/// File name and format, as the report names the recording.
+fn origin_of(recording: &recording::Recording) -> String {
+    let origin = recording.origin();
+    let note = origin.note.as_deref().map(|note| format!("; {note}")).unwrap_or_default();
+    format!("{} ({}{note})", origin.file_name, origin.format)
 }
 
 /// Now, nanoseconds since 1970 UTC.

@@ -1,20 +1,28 @@
 //! The commands that only show or write what is there: `report`, `receivers`, `ports`, `export`.
 
 use super::failure::Exit;
-use super::{ExportArguments, ReceiversArguments, ReportArguments, terminal};
+use super::{ExportArguments, ReceiversArguments, ReportArguments, calibration, terminal};
 use crate::log::Log;
 use crate::report::{Options, Report};
+use crate::spectrum::conversion::ConversionFloor;
 use crate::watching::Watching;
 use crate::{export, port, receiver_table, report};
 
 pub(super) fn report(arguments: &ReportArguments) -> anyhow::Result<Exit> {
+    let board = arguments.board.read()?;
     let log = Log::open(&arguments.log)?;
-    print_report(&log, arguments.json.json, arguments.verdict_code)
+    let floor = calibration::floor_for(&log, board.as_ref())?;
+    print_report(&log, floor, arguments.json.json, arguments.verdict_code)
 }
 
-/// Prints the report of a log.
-pub(super) fn print_report(log: &Log, is_json: bool, is_verdict_code: bool) -> anyhow::Result<Exit> {
-    let report = Report::from_log(log, &Options::default())?;
+/// Prints the report of a log; `floor` is the board's own conversion, where it is known.
+pub(super) fn print_report(
+    log: &Log,
+    floor: Option<ConversionFloor>,
+    is_json: bool,
+    is_verdict_code: bool,
+) -> anyhow::Result<Exit> {
+    let report = Report::from_log(log, &Options { floor, ..Options::default() })?;
     let text = if is_json {
         report::json::render(&report)?
     } else {

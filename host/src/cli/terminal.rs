@@ -25,6 +25,12 @@ pub fn print(text: &str) -> io::Result<()> {
     out.flush()
 }
 
+/// Tells on the error output what to mind about a result.
+pub fn warn(text: &str) {
+    // Nothing can be done when even the error output is closed.
+    let _ = io::stderr().write_all(format!("legwise: mind: {text}\n").as_bytes());
+}
+
 /// A bar over `total` units of work, on the error output; hidden when that is no terminal.
 pub fn progress_bar(total: u64, unit: &str) -> ProgressBar {
     let bar = ProgressBar::with_draw_target(Some(total), ProgressDrawTarget::stderr_with_hz(8));
