@@ -112,8 +112,9 @@ impl BoardFacts {
     /// # Errors
     /// When the log cannot be read.
     pub fn of(log: &Log) -> Result<Self, LogError> {
-        let mut statement =
-            log.connection().prepare("SELECT board, serial, sample_rate_mhz FROM run ORDER BY run LIMIT 1")?;
+        let mut statement = log
+            .connection()
+            .prepare("SELECT board, serial, sample_rate_mhz FROM run ORDER BY run LIMIT 1")?;
         let mut rows = statement.query([])?;
         let mut facts = Self { created_utc: log.info("created_utc")?, ..Self::default() };
         if let Some(row) = rows.next()? {
@@ -184,7 +185,8 @@ impl BoardFile {
     /// # Errors
     /// When a value has no TOML form, which finite numbers and text always have.
     pub fn to_text(&self) -> Result<String, toml::ser::Error> {
-        let head = "# A board's own conversion, measured with both legs tied together. For `--board` of legwise.\n";
+        let head =
+            "# A board's own conversion, measured with both legs tied together. For `--board` of legwise.\n";
         Ok(format!("{head}{}", toml::to_string(self)?))
     }
 

@@ -12,7 +12,9 @@
 
 use crate::log::LogError;
 use crate::report::{Report, ReportError, figures};
-use crate::spectrum::conversion::{self, ConversionFloor, Input, Point, PointKind, Refusal, Settings, Verdict};
+use crate::spectrum::conversion::{
+    self, ConversionFloor, Input, Point, PointKind, Refusal, Settings, Verdict,
+};
 use crate::spectrum::ladder::Ladder;
 use legwise_protocol::message::{Mode, SegmentSet};
 use std::collections::BTreeMap;
@@ -25,6 +27,9 @@ pub mod scene;
 pub mod svg;
 
 pub use layout::layout;
+
+/// Ratio of one leg alone, x against x/2: no pair makes more, and a limit above says nothing.
+const ONE_LEG: f64 = 2.0;
 
 /// Why there is no picture.
 #[derive(Debug, thiserror::Error)]
@@ -113,7 +118,7 @@ pub enum Mark {
         /// Highest magnitude.
         db: f64,
     },
-    /// Nothing is said.
+    /// Nothing is said, or nothing that is not true of every pair.
     Refused,
 }
 
@@ -122,6 +127,8 @@ pub enum Mark {
 pub struct PlacedMark {
     /// Hz.
     pub frequency_hz: f64,
+    /// From where to where it reaches, Hz.
+    pub band_hz: (f64, f64),
     /// Whether it stands for one line of the common mode instead of a band.
     pub is_line: bool,
     /// What is shown.
@@ -227,10 +234,13 @@ fn marks_of(points: &[Point]) -> Vec<PlacedMark> {
             let (low_db, high_db) = point.magnitude_range_db();
             let mark = match point.verdict {
                 Verdict::Significant => Mark::Value { db: point.magnitude_db(), low_db, high_db },
-                Verdict::UpperLimit { magnitude, .. } => Mark::Limit { db: 20.0 * magnitude.log10() },
-                Verdict::Refused(_) => Mark::Refused,
+                Verdict::UpperLimit { magnitude, .. } if magnitude < ONE_LEG => {
+                    Mark::Limit { db: 20.0 * magnitude.log10() }
+                }
+                Verdict::UpperLimit { .. } | Verdict::Refused(_) => Mark::Refused,
             };
-            PlacedMark { frequency_hz: point.frequency_hz, is_line: point.kind == PointKind::Line, mark }
+            let (frequency_hz, band_hz) = (point.frequency_hz, point.band_hz);
+            PlacedMark { frequency_hz, band_hz, is_line: point.kind == PointKind::Line, mark }
         })
         .collect();
     marks.sort_by(|a, b| a.frequency_hz.total_cmp(&b.frequency_hz));
@@ -241,8 +251,12 @@ fn marks_of(points: &[Point]) -> Vec<PlacedMark> {
 fn missing(points: &[Point]) -> Option<String> {
     let mut reasons: BTreeMap<&str, usize> = BTreeMap::new();
     for point in points {
-        let Verdict::Refused(refusal) = point.verdict else { return None };
-        *reasons.entry(words(refusal)).or_default() += 1;
+        let reason = match point.verdict {
+            Verdict::Refused(refusal) => words(refusal),
+            Verdict::UpperLimit { magnitude, .. } if magnitude >= ONE_LEG => words(Refusal::NoiseOnly),
+            _ => return None,
+        };
+        *reasons.entry(reason).or_default() += 1;
     }
     let commonest = reasons.into_iter().max_by_key(|(_, count)| *count);
     Some(commonest.map_or_else(|| "nothing to judge".to_owned(), |(words, _)| words.to_owned()))
@@ -250,7 +264,9 @@ fn missing(points: &[Point]) -> Option<String> {
 
 fn words(refusal: Refusal) -> &'static str {
     match refusal {
-        Refusal::TooFewSegments { .. } => "nothing claimed: fewer than 8 segments of an idle bus at any frequency",
+        Refusal::TooFewSegments { .. } => {
+            "nothing claimed: fewer than 8 segments of an idle bus at any frequency"
+        }
         Refusal::NothingMeasured => "nothing claimed: a mode holds nothing at all",
         Refusal::NoiseOnly => "nothing claimed: the common mode does not stand clear of the board's noise",
         Refusal::OtherDirection => "nothing claimed: what is coherent comes from the differential mode",
@@ -283,7 +299,8 @@ fn subtitles_of(report: &Report, ladder: &Ladder) -> Vec<String> {
         let text = moment.as_ref().and_then(|moment| moment.utc.clone())?;
         Some(text.get(..19)?.replace('T', " "))
     };
-    let length = recording.duration_s.map_or_else(String::new, |length_s| format!("{} ", figures::span(length_s)));
+    let length =
+        recording.duration_s.map_or_else(String::new, |length_s| format!("{} ", figures::span(length_s)));
     let time = match (utc(&recording.started), utc(&recording.ended)) {
         (Some(from), Some(to)) => format!("{from} to {to} UTC"),
         _ => format!("{length}without a clock (no UTC)"),
@@ -292,12 +309,14 @@ fn subtitles_of(report: &Report, ladder: &Ladder) -> Vec<String> {
         (Some(_), Some(name), Some(origin)) => format!("{origin}: {name} · "),
         _ => String::new(),
     };
-    let board = recording.runs.iter().find_map(|run| run.board.clone()).unwrap_or_else(|| "not named".to_owned());
-    let more = if recording.runs.len() > 1 { format!(", {} runs", recording.runs.len()) } else { String::new() };
+    let board =
+        recording.runs.iter().find_map(|run| run.board.clone()).unwrap_or_else(|| "not named".to_owned());
+    let more =
+        if recording.runs.len() > 1 { format!(", {} runs", recording.runs.len()) } else { String::new() };
     let rate = figures::pair_rate(ladder.sample_rate_hz);
     vec![
         format!("{origin}{time}"),
-        format!("receiver {} · board {board}{more} · {rate} · {}", report.receiver.title, segments_of(ladder)),
+        format!("receiver {} · board {board}{more} · {rate} · {}", report.receiver.name, segments_of(ladder)),
     ]
 }
 
@@ -307,8 +326,9 @@ fn segments_of(ladder: &Ladder) -> String {
         let mean = ladder.of_set(set).find(|mean| mean.mean.rung == rung);
         figures::count(mean.map_or(0, |mean| mean.mean.segments))
     };
-    let both =
-        |rung: u8| format!("{} idle, {} driven", count(rung, SegmentSet::Idle), count(rung, SegmentSet::Driven));
+    let both = |rung: u8| {
+        format!("{} idle, {} driven", count(rung, SegmentSet::Idle), count(rung, SegmentSet::Driven))
+    };
     let slowest = ladder.means.iter().map(|mean| mean.mean.rung).max().unwrap_or(0);
     let full = format!("segments: {} at the full rate", both(0));
     if slowest == 0 { full } else { format!("{full}; {} at the slowest", both(slowest)) }
@@ -321,10 +341,12 @@ fn notes(has_floor: bool) -> Vec<String> {
         "The board's own conversion is not known: what it adds is in the values. 'legwise trim' measures it."
     };
     vec![
-        "Densities are one-sided, Hann window, mean of each segment removed; rungs of the ladder join at 0.35 of the lower rung's rate. \
-         Any line may be the image of one above half the rate;"
+        "One-sided densities, Hann window, mean of each segment removed. Rungs join at 0.35 of the lower one's rate; driven \
+         segments of a slower rung hold more rest: their curves step there."
             .to_owned(),
-        "levels near half the rate read low by what the front end takes away, whose corner is not in the log.".to_owned(),
+        "Any line may be the image of one above half the rate. Near half the rate levels read low by what the front end \
+         takes away; its corner is not in the log."
+            .to_owned(),
         format!("Conversion: differential volt per common volt, from idle segments. {board}"),
     ]
 }

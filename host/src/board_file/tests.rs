@@ -77,7 +77,10 @@ fn another_board_or_rate_is_told_in_words_and_a_dithered_rate_is_the_same() {
     assert_eq!(file().differences(&facts(Some("17"), 500_000.0)), Vec::<String>::new());
     assert_eq!(file().differences(&facts(None, 515_000.0)), Vec::<String>::new());
     let rate = file().differences(&facts(Some("17"), 200_000.0));
-    assert!(rate.len() == 1 && rate[0].contains("500 k pairs/s") && rate[0].contains("200 k pairs/s"), "{rate:?}");
+    assert!(
+        rate.len() == 1 && rate[0].contains("500 k pairs/s") && rate[0].contains("200 k pairs/s"),
+        "{rate:?}"
+    );
     let serial = file().differences(&facts(Some("18"), 500_000.0));
     assert!(serial.len() == 1 && serial[0].contains("\"17\"") && serial[0].contains("\"18\""), "{serial:?}");
     let other = BoardFacts { board: Some("desktop".to_owned()), ..facts(None, 1e6) };
@@ -106,6 +109,9 @@ fn mismatch_and_conversion_say_the_same_of_two_legs() {
         assert!((found.ratio.0 - (exact.0 - 1.0)).abs() < 1e-12, "{found:?} for {exact:?}");
         assert!((found.ratio.1 - exact.1).abs() < 1e-12, "{found:?} for {exact:?}");
         assert!((found.phase_degrees() - exact.1.atan2(exact.0).to_degrees()).abs() < 1e-9);
-        assert!((found.radius / 1e-3 - 1.0).abs() < 0.03);
+        // A small step of H moves ε by the step times radius over radius.
+        let moved = tied_legs::Mismatch::of(&FloorPoint { imaginary: h.1 + 1e-7, ..point });
+        let step = (moved.ratio.0 - found.ratio.0).hypot(moved.ratio.1 - found.ratio.1) / 1e-7;
+        assert!((step / (found.radius / 1e-3) - 1.0).abs() < 1e-5, "{step}");
     }
 }

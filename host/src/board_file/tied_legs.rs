@@ -156,7 +156,8 @@ pub fn summary(file: &BoardFile, floor: &ConversionFloor) -> String {
         figures::hertz(last.frequency_hz),
         figures::count(file.segments),
     );
-    let _ = writeln!(text, "  {:>12}  {:<34}  leg B against leg A", "frequency", "the board's own conversion");
+    let _ =
+        writeln!(text, "  {:>12}  {:<34}  leg B against leg A", "frequency", "the board's own conversion");
     let lowest = first.frequency_hz.log10().ceil() as i32;
     let highest = last.frequency_hz.log10().floor() as i32;
     let decades = (lowest..=highest).filter_map(|decade| floor.at(10_f64.powi(decade)));
@@ -182,11 +183,10 @@ fn row(point: &FloorPoint) -> String {
     };
     let mismatch = Mismatch::of(point);
     format!(
-        "{:>12}  {conversion:<34}  {:+.3} % ±{:.3} %, {:+.3}° ±{:.3}°",
+        "{:>12}  {conversion:<34}  {} {}, {}",
         figures::hertz(point.frequency_hz),
-        100.0 * mismatch.ratio.0,
-        100.0 * mismatch.radius,
-        mismatch.phase_degrees(),
-        mismatch.radius.to_degrees()
+        figures::percent_signed(mismatch.ratio.0),
+        figures::uncertainty_percent(mismatch.radius),
+        figures::degrees(mismatch.phase_degrees(), mismatch.radius.to_degrees())
     )
 }

@@ -28,6 +28,7 @@ built_in! {
     "charger": "a charger brings its switching line and mains hum onto the pair",
     "radio": "a hand-held radio near one node shifts both legs while someone talks",
     "can-weak-ground": "a CAN node's ground lifts under load and carries the pair with it",
+    "tied-legs": "no bus: both legs on one generator, to measure what the monitor itself converts",
 }
 
 /// A built-in scenario by its name, case ignored.

@@ -3,6 +3,8 @@
 //! A logarithmic axis puts `v` at `from + (to − from)·log(v/low)/log(high/low)`, a linear one at
 //! `from + (to − from)·(v − low)/(high − low)`. Places are in px and may run either way.
 
+use crate::report::figures;
+
 /// What an axis does with values.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Scale {
@@ -58,7 +60,7 @@ impl Axis {
         let mut ticks = Vec::new();
         for decade in first..=last {
             for step in 1..10 {
-                let value = f64::from(step) * power_of_ten(decade);
+                let value = f64::from(step) * figures::power_of_ten(decade);
                 if self.holds(value) {
                     ticks.push(Tick { value, label: (step == 1).then(|| label(value)) });
                 }
@@ -77,26 +79,6 @@ impl Axis {
             })
             .collect()
     }
-}
-
-/// Exactly the nearest double to a power of ten: `powi` is off by a bit for negative ones.
-fn power_of_ten(exponent: i32) -> f64 {
-    format!("1e{exponent}").parse().unwrap_or(f64::NAN)
-}
-
-/// A value with the prefix that leaves one to three digits before the point, none after where they are 0:
-/// `100 mHz`, `1 kHz`, `10 µV/√Hz`.
-pub fn with_prefix(value: f64, unit: &str) -> String {
-    const PREFIXES: [(i32, &str); 8] =
-        [(-12, "p"), (-9, "n"), (-6, "µ"), (-3, "m"), (0, ""), (3, "k"), (6, "M"), (9, "G")];
-    let exponent = if value > 0.0 { (value.log10() + 1e-9).floor() as i32 } else { 0 };
-    let thousands = exponent.div_euclid(3) * 3;
-    let (power, prefix) = PREFIXES
-        .into_iter()
-        .find(|(power, _)| *power == thousands)
-        .unwrap_or(if thousands < 0 { (-12, "p") } else { (9, "G") });
-    let number = format!("{:.2}", value / power_of_ten(power));
-    format!("{} {prefix}{unit}", number.trim_end_matches('0').trim_end_matches('.'))
 }
 
 #[cfg(test)]
@@ -129,36 +111,11 @@ mod tests {
     #[test]
     fn decades_are_labelled_and_what_lies_between_is_not() {
         let axis = Axis { scale: Scale::Logarithmic, low: 0.5, high: 3e3, from_px: 0.0, to_px: 1.0 };
-        let ticks = axis.decades(|value| with_prefix(value, "Hz"));
+        let ticks = axis.decades(|value| figures::tick(value, "Hz"));
         let labels: Vec<&str> = ticks.iter().filter_map(|tick| tick.label.as_deref()).collect();
         assert_eq!(labels, ["1 Hz", "10 Hz", "100 Hz", "1 kHz"]);
         // 0.5 to 0.9, thrice 2 to 9, 2000 and 3000.
         assert_eq!(ticks.len() - labels.len(), 5 + 24 + 2);
         assert!(ticks.windows(2).all(|pair| pair[0].value < pair[1].value));
-    }
-
-    #[test]
-    fn values_carry_the_prefix_of_the_trade() {
-        for (value, unit, text) in [
-            (0.1, "Hz", "100 mHz"),
-            (1.0, "Hz", "1 Hz"),
-            (50.0, "Hz", "50 Hz"),
-            (1e3, "Hz", "1 kHz"),
-            (1e5, "Hz", "100 kHz"),
-            (2.5e5, "Hz", "250 kHz"),
-            (1e6, "Hz", "1 MHz"),
-            (1e-9, "V/√Hz", "1 nV/√Hz"),
-            (1e-6, "V/√Hz", "1 µV/√Hz"),
-            (1e-4, "V/√Hz", "100 µV/√Hz"),
-            (1.0, "V/√Hz", "1 V/√Hz"),
-            (0.238_418_6, "Hz", "238.42 mHz"),
-        ] {
-            assert_eq!(with_prefix(value, unit), text);
-        }
-        for exponent in -12..12 {
-            let text = with_prefix(10_f64.powi(exponent), "V");
-            let digits: f64 = text.split(' ').next().unwrap().parse().unwrap();
-            assert!([1.0, 10.0, 100.0].contains(&digits), "{text}");
-        }
     }
 }

@@ -2,9 +2,10 @@
 //!
 //! The page is A4 across at 96 px per inch. Each curve has a weight and a dash of its own ([`pen_of`]).
 
-use super::axis::{Axis, Scale, Tick, with_prefix};
+use super::axis::{Axis, Scale, Tick};
 use super::scene::{Anchor, Colour, Frame, Pen, Place, Scene};
 use super::{Plot, Series};
+use crate::report::figures;
 use legwise_protocol::message::{Mode, SegmentSet};
 
 mod marks;
@@ -32,9 +33,9 @@ const HATCH: Pen = Pen { width_px: 0.6, dash_px: &[], colour: Colour(120, 120, 1
 /// Weight and dash of a curve: no two are alike.
 pub(super) fn pen_of(mode: Mode, set: SegmentSet) -> Pen {
     let (width_px, dash_px): (f64, &'static [f64]) = match (mode, set) {
-        (Mode::Common, SegmentSet::Idle) => (1.7, &[]),
+        (Mode::Common, SegmentSet::Idle) => (1.4, &[]),
         (Mode::Common, SegmentSet::Driven) => (0.6, &[]),
-        (Mode::Differential, SegmentSet::Idle) => (1.5, &[6.0, 2.0]),
+        (Mode::Differential, SegmentSet::Idle) => (1.2, &[6.0, 2.0]),
         (Mode::Differential, SegmentSet::Driven) => (0.8, &[1.6, 1.4]),
     };
     let colour = match mode {
@@ -72,7 +73,12 @@ pub fn layout(plot: &Plot) -> Scene {
         title: format!("Spectra: {}", plot.title),
         elements: Vec::new(),
     };
-    scene.text((24.0, 32.0), 18.0, Anchor::Start, shortened(&plot.title, TITLE_CHARACTERS));
+    scene.text(
+        (24.0, 32.0),
+        18.0,
+        Anchor::Start,
+        shortened(&format!("Spectra: {}", plot.title), TITLE_CHARACTERS),
+    );
     for (row, subtitle) in plot.subtitles.iter().enumerate() {
         let at = (24.0, 51.0 + 15.0 * row as f64);
         scene.text(at, TEXT_PX, Anchor::Start, shortened(subtitle, LINE_CHARACTERS));
@@ -102,8 +108,10 @@ fn amplitudes(series: &[Series], frame: Frame) -> Axis {
     let highest = all().fold(1e-15, f64::max);
     let lowest = all().fold(highest, f64::min).max(highest / 10_f64.powf(MOST_DECADES));
     let (mut low, mut high) = (lowest * 0.6, highest * 1.7);
-    let axis = |low, high| Axis { scale: Scale::Logarithmic, low, high, from_px: frame.bottom, to_px: frame.top };
-    let labelled = |axis: Axis| axis.decades(|_| String::new()).iter().filter(|tick| tick.label.is_some()).count();
+    let axis =
+        |low, high| Axis { scale: Scale::Logarithmic, low, high, from_px: frame.bottom, to_px: frame.top };
+    let labelled =
+        |axis: Axis| axis.decades(|_| String::new()).iter().filter(|tick| tick.label.is_some()).count();
     if labelled(axis(low, high)) < 2 {
         low = 10_f64.powf(low.log10().floor()) * 0.9;
         high = 10_f64.powf(high.log10().ceil()) * 1.1;
@@ -115,7 +123,7 @@ fn densities(scene: &mut Scene, plot: &Plot) {
     let frame = DENSITIES;
     let across = frequencies(plot, frame);
     let up = amplitudes(&plot.series, frame);
-    let ticks = up.decades(|density| with_prefix(density, "V/√Hz"));
+    let ticks = up.decades(|density| figures::tick(density, "V/√Hz"));
     panel(scene, frame, (&across, &up), &ticks, "amplitude density in V/√Hz");
     blind(scene, frame, &across, (plot.seen_hz.0, plot.half_rate_hz));
     // Idle curves, which conversion rests on, lie on top.
@@ -137,7 +145,7 @@ fn densities(scene: &mut Scene, plot: &Plot) {
 
 /// Grid, ticks and names of the axes of a panel.
 fn panel(scene: &mut Scene, frame: Frame, (across, up): (&Axis, &Axis), ticks: &[Tick], name: &str) {
-    let columns = across.decades(|frequency| with_prefix(frequency, "Hz"));
+    let columns = across.decades(|frequency| figures::tick(frequency, "Hz"));
     for is_labelled in [false, true] {
         let pen = if is_labelled { GRID } else { FINE_GRID };
         for tick in columns.iter().filter(|tick| tick.label.is_some() == is_labelled) {
@@ -172,10 +180,7 @@ fn panel(scene: &mut Scene, frame: Frame, (across, up): (&Axis, &Axis), ticks: &
 
 /// The parts of a panel beyond what is seen.
 fn blind_frames(frame: Frame, across: &Axis, (low_hz, high_hz): (f64, f64)) -> [Frame; 2] {
-    [
-        Frame { right: across.place_px(low_hz), ..frame },
-        Frame { left: across.place_px(high_hz), ..frame },
-    ]
+    [Frame { right: across.place_px(low_hz), ..frame }, Frame { left: across.place_px(high_hz), ..frame }]
 }
 
 /// Hatches what is not seen.
@@ -191,8 +196,8 @@ fn blind(scene: &mut Scene, frame: Frame, across: &Axis, range_hz: (f64, f64)) {
 /// Says what the hatching of the upper panel means.
 fn blind_words(scene: &mut Scene, frame: Frame, across: &Axis, plot: &Plot) {
     let texts = [
-        format!("not seen: DC and below {}", with_prefix(plot.seen_hz.0, "Hz")),
-        format!("not seen: above {}, half the sample rate", with_prefix(plot.half_rate_hz, "Hz")),
+        format!("not seen: DC and below {}", figures::tick(plot.seen_hz.0, "Hz")),
+        format!("not seen: above {}, half the sample rate", figures::tick(plot.half_rate_hz, "Hz")),
     ];
     let parts = blind_frames(frame, across, (plot.seen_hz.0, plot.half_rate_hz));
     for (part, text) in parts.into_iter().zip(texts) {

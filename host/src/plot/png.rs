@@ -17,7 +17,8 @@ const PIXELS_PER_PX: f64 = 2.0;
 /// When there is no memory for the picture, or it cannot be packed.
 pub fn render(scene: &Scene) -> Result<Vec<u8>, PlotError> {
     let pixels = |length_px: f64| (length_px * PIXELS_PER_PX).round().max(1.0) as u32;
-    let mut pixmap = Pixmap::new(pixels(scene.width_px), pixels(scene.height_px)).ok_or(PlotError::Picture)?;
+    let mut pixmap =
+        Pixmap::new(pixels(scene.width_px), pixels(scene.height_px)).ok_or(PlotError::Picture)?;
     pixmap.fill(tiny_skia::Color::WHITE);
     let face = Face::parse(dejavu::sans::regular(), 0).map_err(|_| PlotError::Picture)?;
     let scale = Transform::from_scale(PIXELS_PER_PX as f32, PIXELS_PER_PX as f32);
@@ -139,7 +140,9 @@ mod tests {
 
     #[test]
     fn text_ends_begins_or_is_centred_where_its_anchor_says() {
-        for (anchor, left, right) in [(Anchor::Start, 200, 400), (Anchor::End, 0, 200), (Anchor::Middle, 0, 400)] {
+        for (anchor, left, right) in
+            [(Anchor::Start, 200, 400), (Anchor::End, 0, 200), (Anchor::Middle, 0, 400)]
+        {
             let mut scene = scene();
             scene.text((100.0, 60.0), 20.0, anchor, "1 µV/√Hz");
             let dark = dark(&scene);

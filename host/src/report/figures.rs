@@ -156,6 +156,46 @@ pub fn volts_of_twice_uv(twice_microvolts: i64) -> f64 {
     twice_microvolts as f64 / 2e6
 }
 
+/// Exactly the nearest double to a power of ten: `powi` is off by a bit for negative ones.
+pub(crate) fn power_of_ten(exponent: i32) -> f64 {
+    format!("1e{exponent}").parse().unwrap_or(f64::NAN)
+}
+
+/// A round value beside an axis, with the prefix that leaves one to three digits before the point, none after where they are 0:
+/// `100 mHz`, `1 kHz`, `10 µV/√Hz`.
+pub fn tick(value: f64, unit: &str) -> String {
+    const PREFIXES: [(i32, &str); 8] =
+        [(-12, "p"), (-9, "n"), (-6, "µ"), (-3, "m"), (0, ""), (3, "k"), (6, "M"), (9, "G")];
+    let exponent = if value > 0.0 { (value.log10() + 1e-9).floor() as i32 } else { 0 };
+    let thousands = exponent.div_euclid(3) * 3;
+    let (power, prefix) = PREFIXES
+        .into_iter()
+        .find(|(power, _)| *power == thousands)
+        .unwrap_or(if thousands < 0 { (-12, "p") } else { (9, "G") });
+    let number = format!("{:.2}", value / power_of_ten(power));
+    format!("{} {prefix}{unit}", number.trim_end_matches('0').trim_end_matches('.'))
+}
+
+/// A round level beside an axis: `−40 dB`.
+pub fn tick_decibels(level: f64) -> String {
+    format!("{level:.0} dB").replace('-', "\u{2212}")
+}
+
+/// A small difference as a percentage: `+0.398 %`.
+pub fn percent_signed(share: f64) -> String {
+    format!("{:+.3} %", 100.0 * no_negative_zero(share, 5))
+}
+
+/// The uncertainty of a percentage: `±0.005 %`.
+pub fn uncertainty_percent(share: f64) -> String {
+    format!("±{:.3} %", 100.0 * share)
+}
+
+/// An angle with its uncertainty: `+0.058° ±0.003°`.
+pub fn degrees(angle: f64, uncertainty: f64) -> String {
+    format!("{:+.3}° ±{uncertainty:.3}°", no_negative_zero(angle, 3))
+}
+
 fn scaled(value: f64, units: &[(f64, &str)]) -> String {
     let (value, unit) = prefixed(value, units);
     format!("{} {unit}", significant(value, 4))
@@ -272,5 +312,41 @@ mod tests {
         assert_eq!(volts_of_uv(12_000_001).to_string(), "12.000001");
         assert_eq!(volts_of_twice_uv(-14_000_001).to_string(), "-7.0000005");
         assert_eq!(rounded_volts(0.254_237_288_13).to_string(), "0.2542373");
+    }
+
+    #[test]
+    fn values_carry_the_prefix_of_the_trade() {
+        for (value, unit, text) in [
+            (0.1, "Hz", "100 mHz"),
+            (1.0, "Hz", "1 Hz"),
+            (50.0, "Hz", "50 Hz"),
+            (1e3, "Hz", "1 kHz"),
+            (1e5, "Hz", "100 kHz"),
+            (2.5e5, "Hz", "250 kHz"),
+            (1e6, "Hz", "1 MHz"),
+            (1e-9, "V/√Hz", "1 nV/√Hz"),
+            (1e-6, "V/√Hz", "1 µV/√Hz"),
+            (1e-4, "V/√Hz", "100 µV/√Hz"),
+            (1.0, "V/√Hz", "1 V/√Hz"),
+            (0.238_418_6, "Hz", "238.42 mHz"),
+        ] {
+            assert_eq!(tick(value, unit), text);
+        }
+        for exponent in -12..12 {
+            let text = tick(10_f64.powi(exponent), "V");
+            let digits: f64 = text.split(' ').next().unwrap().parse().unwrap();
+            assert!([1.0, 10.0, 100.0].contains(&digits), "{text}");
+        }
+    }
+
+    #[test]
+    fn levels_and_mismatches_carry_their_sign_and_no_negative_zero() {
+        assert_eq!((tick_decibels(-40.0), tick_decibels(20.0)), ("−40 dB".to_owned(), "20 dB".to_owned()));
+        assert_eq!(
+            (percent_signed(0.003_98), percent_signed(-1e-9)),
+            ("+0.398 %".to_owned(), "+0.000 %".to_owned())
+        );
+        assert_eq!(uncertainty_percent(5.2e-5), "±0.005 %");
+        assert_eq!(degrees(-0.000_2, 0.003), "+0.000° ±0.003°");
     }
 }

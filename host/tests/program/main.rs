@@ -8,10 +8,12 @@
 mod bad_input;
 mod hand_made;
 mod output;
+mod picture;
 mod readme;
 mod room;
 mod same_numbers;
 mod storage;
+mod tied_legs;
 mod truth;
 
 #[cfg(unix)]

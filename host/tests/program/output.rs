@@ -120,7 +120,8 @@ fn the_exit_codes_of_the_help_are_those_of_the_program() {
     }
     let version = room.done(&["--version"]).out;
     assert_eq!(version, format!("legwise {}\n", env!("CARGO_PKG_VERSION")));
-    let commands = ["demo", "ports", "log", "report", "analyse", "simulate", "receivers", "export"];
+    let commands =
+        ["demo", "ports", "log", "report", "analyse", "simulate", "receivers", "export", "plot", "trim"];
     for command in commands {
         assert!(help.lines().any(|line| line.trim_start().starts_with(command)), "{command}");
         room.done(&[command, "--help"]);

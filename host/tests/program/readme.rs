@@ -6,7 +6,8 @@ use std::path::Path;
 /// The line a stranger types first, and the one after it.
 const QUICK_START: [&str; 2] = ["cargo run --release -- demo", "cargo test --workspace"];
 /// Commands that run here.
-const TRIED: [&str; 7] = ["demo", "simulate", "analyse", "report", "receivers", "export", "ports"];
+const TRIED: [&str; 9] =
+    ["demo", "simulate", "analyse", "report", "receivers", "export", "ports", "plot", "trim"];
 
 fn readme() -> String {
     let path = Path::new(env!("CARGO_MANIFEST_DIR")).join("../README.md");
@@ -58,6 +59,9 @@ fn quoted_commands(text: &str) -> Vec<String> {
                 (_, "FILE") => "simulated.csv",
                 (_, "LOG") => "night.lwlog",
                 (_, "FOLDER") => "tables",
+                (_, "PICTURE.svg") => "spectra.svg",
+                (_, "BOARD.toml") => "measured.toml",
+                (_, "TIED") => "tied.csv",
                 (_, word) => word,
             };
         }
@@ -82,7 +86,10 @@ fn provide(room: &Room, arguments: &[String]) {
         "analyse" => {
             room.done(&["simulate", "press-ground", "--seconds", "0.05", "-o", file]);
         }
-        "report" | "export" => {
+        "trim" => {
+            room.done(&["simulate", "tied-legs", "--seconds", "1", "-o", file]);
+        }
+        "report" | "export" | "plot" => {
             room.done(&["simulate", "press-ground", "--seconds", "0.05", "-o", "provided.csv"]);
             room.done(&["analyse", "provided.csv", "-o", file]);
         }
@@ -112,7 +119,9 @@ fn every_command_of_the_readme_that_needs_no_board_runs() {
         match name.as_str() {
             "demo" => arguments.extend(["--minutes".to_owned(), "0.05".to_owned()]),
             "simulate" if arguments.contains(&"-o".to_owned()) => {
-                arguments.extend(["--seconds".to_owned(), "0.05".to_owned()]);
+                // A board cannot be measured in less.
+                let seconds = if arguments.contains(&"tied-legs".to_owned()) { "1" } else { "0.05" };
+                arguments.extend(["--seconds".to_owned(), seconds.to_owned()]);
             }
             _ => {}
         }
@@ -138,7 +147,8 @@ fn every_command_of_the_readme_that_needs_no_board_runs() {
 #[test]
 fn every_option_the_readme_names_exists() {
     let room = Room::new();
-    let commands = ["demo", "ports", "log", "report", "analyse", "simulate", "receivers", "export"];
+    let commands =
+        ["demo", "ports", "log", "report", "analyse", "simulate", "receivers", "export", "plot", "trim"];
     let helps: String = commands.iter().map(|command| room.done(&[command, "--help"]).out).collect();
     let text = readme();
     let spans =

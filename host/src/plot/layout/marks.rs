@@ -4,6 +4,7 @@ use super::super::{Mark, PlacedMark, Plot};
 use super::{CONVERSION, TEXT_PX, blind, frequencies, outline, panel};
 use crate::plot::axis::{Axis, Scale};
 use crate::plot::scene::{Anchor, Colour, Frame, Pen, Place, Scene};
+use crate::report::figures;
 
 const VALUE: Pen = Pen { width_px: 1.6, dash_px: &[], colour: Colour::BLACK };
 const BAR: Pen = Pen { width_px: 1.0, dash_px: &[], colour: Colour::BLACK };
@@ -14,6 +15,8 @@ const REGION: Colour = Colour(205, 205, 205);
 const BAR_PX: f64 = 2.4;
 const ARROW_PX: f64 = 8.0;
 const MARK_PX: f64 = 3.2;
+/// Height of the strip where nothing is said, px.
+const UNSAID_PX: f64 = 7.0;
 /// Lowest level drawn, dB: below it lies no board.
 const LOWEST_DB: f64 = -140.0;
 
@@ -32,7 +35,7 @@ fn decibels(plot: &Plot, frame: Frame) -> Axis {
     let lowest = levels.iter().copied().fold(f64::INFINITY, f64::min).max(LOWEST_DB);
     let highest = levels.iter().copied().fold(f64::NEG_INFINITY, f64::max);
     let (mut low, mut high) = if lowest <= highest {
-        (((lowest - 2.0) / 10.0).floor() * 10.0, ((highest + 2.0) / 10.0).ceil() * 10.0)
+        (((lowest - 5.0) / 10.0).floor() * 10.0, ((highest + 2.0) / 10.0).ceil() * 10.0)
     } else {
         (-60.0, 0.0)
     };
@@ -51,10 +54,11 @@ pub(super) fn conversion(scene: &mut Scene, plot: &Plot) {
     let across = frequencies(plot, frame);
     let up = decibels(plot, frame);
     let step = if up.high - up.low > 60.0 { 20.0 } else { 10.0 };
-    let ticks = up.steps(step, |level| format!("{level:.0} dB").replace('-', "\u{2212}"));
+    let ticks = up.steps(step, figures::tick_decibels);
     panel(scene, frame, (&across, &up), &ticks, "conversion CM → DM in dB");
     blind(scene, frame, &across, plot.judged_hz);
     let place = |hz: f64, db: f64| (across.place_px(hz), up.place_px(db));
+    unsaid(scene, plot, &across, frame);
     regions(scene, plot, &place);
     for placed in &plot.marks {
         match placed.mark {
@@ -74,13 +78,41 @@ pub(super) fn conversion(scene: &mut Scene, plot: &Plot) {
     legend(scene, frame, !plot.floor.is_empty());
 }
 
+/// A hatched strip along the bottom where nothing is said.
+fn unsaid(scene: &mut Scene, plot: &Plot, across: &Axis, frame: Frame) {
+    let mut runs: Vec<(f64, f64)> = Vec::new();
+    let mut goes_on = false;
+    for band in plot.marks.iter().filter(|placed| !placed.is_line) {
+        let is_unsaid = band.mark == Mark::Refused;
+        match runs.last_mut() {
+            Some(run) if is_unsaid && goes_on => run.1 = band.band_hz.1,
+            _ if is_unsaid => runs.push(band.band_hz),
+            _ => {}
+        }
+        goes_on = is_unsaid;
+    }
+    for (low_hz, high_hz) in runs {
+        let (left, right) = (across.place_px(low_hz), across.place_px(high_hz));
+        let strip = Frame { left, right, top: frame.bottom - UNSAID_PX, bottom: frame.bottom };
+        unsaid_strip(scene, "unsaid", strip);
+    }
+}
+
+fn unsaid_strip(scene: &mut Scene, name: &'static str, strip: Frame) {
+    scene.area(name, strip.corners(), Colour::WHITE);
+    scene.hatch(name, strip, 4.0, LIMIT);
+    scene.line(name, vec![(strip.left, strip.top), (strip.right, strip.top)], LIMIT);
+}
+
 /// Runs of neighbouring bands with a value: region and line; one alone gets a short bar.
 fn regions(scene: &mut Scene, plot: &Plot, place: &dyn Fn(f64, f64) -> Place) {
     let bands: Vec<&PlacedMark> = plot.marks.iter().filter(|placed| !placed.is_line).collect();
     let mut runs: Vec<Vec<(f64, f64, f64, f64)>> = vec![Vec::new()];
     for band in bands {
         match (band.mark, runs.last_mut()) {
-            (Mark::Value { db, low_db, high_db }, Some(run)) => run.push((band.frequency_hz, db, low_db, high_db)),
+            (Mark::Value { db, low_db, high_db }, Some(run)) => {
+                run.push((band.frequency_hz, db, low_db, high_db))
+            }
             _ => runs.push(Vec::new()),
         }
     }
@@ -127,17 +159,20 @@ fn empty(scene: &mut Scene, frame: Frame, reason: &str) {
 
 fn legend(scene: &mut Scene, frame: Frame, has_floor: bool) {
     let y = frame.top - 10.0;
-    let left = |slot: f64| frame.left + 250.0 * slot;
-    let strip = Frame { left: left(0.0), right: left(0.0) + 40.0, top: y - 5.0, bottom: y + 5.0 };
+    let left = |offset: f64| frame.left + offset;
+    let strip = Frame { left: left(0.0), right: left(36.0), top: y - 5.0, bottom: y + 5.0 };
     scene.area("legend", strip.corners(), REGION);
     scene.line("legend", vec![(strip.left, y), (strip.right, y)], VALUE);
-    scene.text((strip.right + 7.0, y + 4.0), TEXT_PX, Anchor::Start, "in bands, with 95 % region");
-    line_mark(scene, "legend", (left(1.0) + 30.0, y), (y + 7.0, y - 7.0));
-    scene.text((left(1.0) + 47.0, y + 4.0), TEXT_PX, Anchor::Start, "at a line, with 95 % region");
-    limit(scene, "legend", (left(2.0) + 30.0, y - 4.0));
-    scene.text((left(2.0) + 47.0, y + 4.0), TEXT_PX, Anchor::Start, "upper limit, nothing claimed");
+    scene.text((strip.right + 6.0, y + 4.0), TEXT_PX, Anchor::Start, "in bands, with 95 % region");
+    line_mark(scene, "legend", (left(230.0), y), (y + 7.0, y - 7.0));
+    scene.text((left(240.0), y + 4.0), TEXT_PX, Anchor::Start, "at a line, with 95 % region");
+    limit(scene, "legend", (left(434.0), y - 4.0));
+    scene.text((left(444.0), y + 4.0), TEXT_PX, Anchor::Start, "upper limit, nothing claimed");
+    let strip = Frame { left: left(638.0), right: left(664.0), top: y - 3.5, bottom: y + 3.5 };
+    unsaid_strip(scene, "legend", strip);
+    scene.text((left(670.0), y + 4.0), TEXT_PX, Anchor::Start, "nothing said");
     if has_floor {
-        scene.line("legend", vec![(left(3.0), y), (left(3.0) + 40.0, y)], FLOOR);
-        scene.text((left(3.0) + 47.0, y + 4.0), TEXT_PX, Anchor::Start, "the board's own, legs tied");
+        scene.line("legend", vec![(left(772.0), y), (left(808.0), y)], FLOOR);
+        scene.text((left(814.0), y + 4.0), TEXT_PX, Anchor::Start, "the board's own, legs tied");
     }
 }

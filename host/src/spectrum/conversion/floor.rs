@@ -8,9 +8,12 @@
 //!
 //! Between its frequencies the complex ratio is interpolated straight over the logarithm of frequency.
 
-use super::{Direction, Input, Record, Settings, grid, pool::Pool, region};
+use super::grid::{self, Place};
+use super::{Direction, Input, PointKind, Record, Settings, pool::Pool, region};
 use serde::{Deserialize, Serialize};
 
+/// A point of a floor recording is used where the common mode is so many times the board's noise in it.
+const CLEAR_OF_NOISE: f64 = 10.0;
 /// A point of a floor recording whose region is wider than this tells nothing: -20 dB.
 const WIDEST_RADIUS: f64 = 0.1;
 /// The first and last value hold this far beyond their frequencies: two points of the curve.
@@ -129,13 +132,25 @@ impl ConversionFloor {
     pub fn from_tied_legs(records: &[Record], settings: &Settings) -> Result<Self, FloorError> {
         let places = grid::places(records, settings, Direction::Conversion);
         let input = Input { records, ..Input::default() };
-        let mut points = Vec::new();
+        let mut pooled: Vec<(&Place, Pool, f64)> = Vec::new();
         for place in &places {
             let Some(pool) = super::pool_at(&input, place, Direction::Conversion) else { continue };
             if pool.time_segments >= super::LEAST_SEGMENTS && pool.is_measured() {
-                points.extend(point_of(place.frequency_hz, &pool));
+                let noise = common_noise_of(&pool);
+                pooled.push((place, pool, noise));
             }
         }
+        let points: Vec<FloorPoint> = pooled
+            .iter()
+            .filter_map(|(place, pool, noise)| {
+                let noise = if place.kind == PointKind::Line {
+                    noise.min(noise_beside(place, &pooled))
+                } else {
+                    *noise
+                };
+                point_of(place.frequency_hz, pool, noise)
+            })
+            .collect();
         if points.is_empty() { Err(FloorError::TooWeak) } else { Self::new(points) }
     }
 
@@ -169,16 +184,34 @@ impl FloorPoint {
     }
 }
 
-/// A point of a floor recording, unless its region is too wide.
-fn point_of(frequency_hz: f64, pool: &Pool) -> Option<FloorPoint> {
-    let region = region::Region::of(pool, 1.0, None);
-    let rest = region::unexplained(pool) * pool.answering;
-    (region.radius < WIDEST_RADIUS).then(|| FloorPoint {
+/// Noise of the board in the common mode, V²/Hz: a quarter of what the common mode does not explain of the
+/// differential one.
+fn common_noise_of(pool: &Pool) -> f64 {
+    region::unexplained(pool) * pool.answering / 4.0 / pool.bins.max(1) as f64
+}
+
+/// That noise in the nearest band: at a line itself, rounding on the wire hides it. Infinite without a band.
+fn noise_beside(line: &Place, pooled: &[(&Place, Pool, f64)]) -> f64 {
+    let distance = |place: &Place| (place.frequency_hz / line.frequency_hz).ln().abs();
+    let bands = pooled.iter().filter(|(place, ..)| place.kind != PointKind::Line);
+    let nearest = bands.min_by(|(a, ..), (b, ..)| distance(a).total_cmp(&distance(b)));
+    nearest.map_or(f64::INFINITY, |(_, _, noise)| *noise)
+}
+
+/// A point of a floor recording, unless its region is too wide or its common mode is little more than the
+/// board's noise, which would make the ratio low and is taken off.
+fn point_of(frequency_hz: f64, pool: &Pool, common_noise_v2_per_hz: f64) -> Option<FloorPoint> {
+    let noise = common_noise_v2_per_hz * pool.bins as f64;
+    if pool.asking < CLEAR_OF_NOISE * noise {
+        return None;
+    }
+    let region = region::Region::of(pool, pool.asking / (pool.asking - noise), None);
+    (region.radius < WIDEST_RADIUS).then_some(FloorPoint {
         frequency_hz,
         real: region.ratio.0,
         imaginary: region.ratio.1,
         radius: region.radius,
-        common_noise_v2_per_hz: Some(rest / 4.0 / pool.bins.max(1) as f64),
+        common_noise_v2_per_hz: Some(common_noise_v2_per_hz),
     })
 }
 

@@ -206,3 +206,20 @@ fn a_point_tells_its_range_and_phase() {
     assert_eq!(point.magnitude_range_db().0, f64::NEG_INFINITY);
     assert!(point.upper_limit_db().is_some());
 }
+
+#[test]
+fn a_floor_is_measured_where_the_common_mode_stands_clear_of_noise_and_that_noise_is_taken_off() {
+    // Noise of 4e-9 in DM is 1e-9 in CM: a thousandth, a twentieth and a fifth of it.
+    for (common, is_clear) in [(1e-6, true), (2e-8, true), (5e-9, false)] {
+        let (h, signal) = (0.01, common - 1e-9);
+        let bin = RungBin { common, differential: signal * h * h + 4e-9, cross: (signal * h, 0.0) };
+        let tied = spectra(0, SegmentSet::Idle, 200_000, bin);
+        let records = [Record { spectra: &tied, coding: Coding::Exact }];
+        let floor = ConversionFloor::from_tied_legs(&records, &Settings::default());
+        assert_eq!(floor.is_ok(), is_clear, "{common}");
+        for point in floor.iter().flat_map(ConversionFloor::points) {
+            assert!((point.real / h - 1.0).abs() < 1e-3, "{common}: {point:?}");
+            assert!((point.common_noise_v2_per_hz.unwrap() / 1e-9 - 1.0).abs() < 1e-3, "{common}: {point:?}");
+        }
+    }
+}
