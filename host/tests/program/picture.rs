@@ -8,7 +8,7 @@ use std::collections::{BTreeMap, BTreeSet};
 
 /// Two seconds of a drive beside a talking bus, as a log and as a recording.
 fn drive(room: &Room) {
-    room.done(&["simulate", "drive-bay", "--seconds", "2", "-o", "x.wav"]);
+    room.done(&["simulate", &room.early("drive-bay"), "--seconds", "2", "-o", "x.wav"]);
     room.done(&["analyse", "x.wav", "-o", "x.lwlog", "--point", "panel 3, <C> & D"]);
 }
 
