@@ -247,7 +247,7 @@ fn marks_of(points: &[Point]) -> Vec<PlacedMark> {
     marks
 }
 
-/// The commonest reason for a curve without a value or a limit.
+/// Why a curve has neither a value nor a limit: its reasons, the commonest first.
 fn missing(points: &[Point]) -> Option<String> {
     let mut reasons: BTreeMap<&str, usize> = BTreeMap::new();
     for point in points {
@@ -258,18 +258,20 @@ fn missing(points: &[Point]) -> Option<String> {
         };
         *reasons.entry(reason).or_default() += 1;
     }
-    let commonest = reasons.into_iter().max_by_key(|(_, count)| *count);
-    Some(commonest.map_or_else(|| "nothing to judge".to_owned(), |(words, _)| words.to_owned()))
+    let mut reasons: Vec<(&str, usize)> = reasons.into_iter().collect();
+    reasons.sort_by_key(|(_, count)| std::cmp::Reverse(*count));
+    let reasons: Vec<&str> = reasons.into_iter().map(|(words, _)| words).collect();
+    let reasons =
+        if reasons.is_empty() { "no frequency to judge".to_owned() } else { reasons.join("; elsewhere ") };
+    Some(format!("nothing claimed: {reasons}"))
 }
 
 fn words(refusal: Refusal) -> &'static str {
     match refusal {
-        Refusal::TooFewSegments { .. } => {
-            "nothing claimed: fewer than 8 segments of an idle bus at any frequency"
-        }
-        Refusal::NothingMeasured => "nothing claimed: a mode holds nothing at all",
-        Refusal::NoiseOnly => "nothing claimed: the common mode does not stand clear of the board's noise",
-        Refusal::OtherDirection => "nothing claimed: what is coherent comes from the differential mode",
+        Refusal::TooFewSegments { .. } => "fewer than 8 segments with the bus idle",
+        Refusal::NothingMeasured => "a mode holds nothing at all",
+        Refusal::NoiseOnly => "the common mode is lost in the board's noise",
+        Refusal::OtherDirection => "what is coherent comes from the differential mode",
     }
 }
 

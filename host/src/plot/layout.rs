@@ -133,7 +133,11 @@ fn densities(scene: &mut Scene, plot: &Plot) {
             scene.line(name_of(one.mode, one.set), points.collect(), pen_of(one.mode, one.set));
         }
     }
-    blind_words(scene, frame, &across, plot);
+    let blind_texts = [
+        format!("not seen: DC and below {}", figures::tick(plot.seen_hz.0, "Hz")),
+        format!("not seen: above {}, half the sample rate", figures::tick(plot.half_rate_hz, "Hz")),
+    ];
+    blind_words(scene, frame, (&across, (plot.seen_hz.0, plot.half_rate_hz)), &blind_texts);
     outline(scene, frame);
     for (slot, one) in plot.series.iter().enumerate() {
         let left = frame.left + 250.0 * slot as f64;
@@ -193,21 +197,21 @@ fn blind(scene: &mut Scene, frame: Frame, across: &Axis, range_hz: (f64, f64)) {
     }
 }
 
-/// Says what the hatching of the upper panel means.
-fn blind_words(scene: &mut Scene, frame: Frame, across: &Axis, plot: &Plot) {
-    let texts = [
-        format!("not seen: DC and below {}", figures::tick(plot.seen_hz.0, "Hz")),
-        format!("not seen: above {}, half the sample rate", figures::tick(plot.half_rate_hz, "Hz")),
-    ];
-    let parts = blind_frames(frame, across, (plot.seen_hz.0, plot.half_rate_hz));
-    for (part, text) in parts.into_iter().zip(texts) {
+/// Says what the hatching below and above means.
+fn blind_words(
+    scene: &mut Scene,
+    frame: Frame,
+    (across, range_hz): (&Axis, (f64, f64)),
+    texts: &[String; 2],
+) {
+    for (part, text) in blind_frames(frame, across, range_hz).into_iter().zip(texts) {
         let x = (part.left + part.right) / 2.0;
         let half_length = 3.2 * text.chars().count() as f64;
         let middle = (frame.top + frame.bottom) / 2.0;
         let strip =
             Frame { left: x - 7.5, right: x + 7.5, top: middle - half_length, bottom: middle + half_length };
         scene.area("label", strip.corners(), Colour::WHITE);
-        scene.upright_text((x + 3.7, middle), 10.0, Anchor::Middle, text);
+        scene.upright_text((x + 3.7, middle), 10.0, Anchor::Middle, text.clone());
     }
 }
 

@@ -1,7 +1,7 @@
 //! The lower panel: conversion with its region, upper limits, the board's own.
 
 use super::super::{Mark, PlacedMark, Plot};
-use super::{CONVERSION, TEXT_PX, blind, frequencies, outline, panel};
+use super::{CONVERSION, TEXT_PX, blind, blind_words, frequencies, outline, panel};
 use crate::plot::axis::{Axis, Scale};
 use crate::plot::scene::{Anchor, Colour, Frame, Pen, Place, Scene};
 use crate::report::figures;
@@ -39,6 +39,10 @@ fn decibels(plot: &Plot, frame: Frame) -> Axis {
     } else {
         (-60.0, 0.0)
     };
+    if plot.marks_missing.is_some() {
+        // Room for the reason.
+        high += 10.0;
+    }
     while high - low < 30.0 {
         low -= 10.0;
         if high < 0.0 {
@@ -57,6 +61,7 @@ pub(super) fn conversion(scene: &mut Scene, plot: &Plot) {
     let ticks = up.steps(step, figures::tick_decibels);
     panel(scene, frame, (&across, &up), &ticks, "conversion CM → DM in dB");
     blind(scene, frame, &across, plot.judged_hz);
+    blind_words(scene, frame, (&across, plot.judged_hz), &["not judged".to_owned(), "not judged".to_owned()]);
     let place = |hz: f64, db: f64| (across.place_px(hz), up.place_px(db));
     unsaid(scene, plot, &across, frame);
     regions(scene, plot, &place);
@@ -148,10 +153,10 @@ fn line_mark(scene: &mut Scene, name: &'static str, (x, y): Place, (low_y, high_
     scene.line(name, edge, BAR);
 }
 
-/// The reason for an empty panel, in its middle.
+/// The reason for an empty panel, near its top.
 fn empty(scene: &mut Scene, frame: Frame, reason: &str) {
-    let (x, y) = ((frame.left + frame.right) / 2.0, (frame.top + frame.bottom) / 2.0);
-    let half = 3.9 * reason.chars().count() as f64;
+    let (x, y) = ((frame.left + frame.right) / 2.0, frame.top + 22.0);
+    let half = 3.4 * reason.chars().count() as f64;
     let strip = Frame { left: x - half, right: x + half, top: y - 14.0, bottom: y + 9.0 };
     scene.area("label", strip.corners(), Colour::WHITE);
     scene.text((x, y), TEXT_PX, Anchor::Middle, reason);
