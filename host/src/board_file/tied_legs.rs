@@ -18,7 +18,8 @@ use legwise_protocol::message::SegmentSet;
 use std::fmt::Write;
 
 /// Differential over common mode, as a voltage ratio, from which on the legs were not tied: -14 dB, far above
-/// what resistors of 1 % and unequal poles make (own arithmetic: 3 % at the most, at the pole).
+/// the 7 % by which two dividers of 1 % resistors differ at the worst (own arithmetic: 3.64 times the
+/// tolerance each).
 const LARGEST_RATIO: f64 = 0.2;
 /// Share of driven segments from which on something else talked on the legs.
 const MOST_DRIVEN: f64 = 0.02;

@@ -45,8 +45,10 @@ fn plot() -> Plot {
 }
 
 fn texts(scene: &Scene) -> Vec<&str> {
-    let text = |element| if let &Element::Text(ref text) = element { Some(text.text.as_str()) } else { None };
-    scene.elements.iter().filter_map(text).collect()
+    let elements = scene.elements.iter();
+    elements
+        .filter_map(|e| if let Element::Text(text) = e { Some(text.text.as_str()) } else { None })
+        .collect()
 }
 
 /// All places of the elements of one name.
