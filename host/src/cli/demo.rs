@@ -53,7 +53,7 @@ pub(super) fn run(arguments: &DemoArguments) -> anyhow::Result<Exit> {
     ))?;
     let started = Instant::now();
     let board = VirtualBoard::new(source, settings, "simulated", boot_id(arguments.seed));
-    let log = record(board, Session::new(log), pairs, rate_hz, about.created_utc_ns)?;
+    let log = record(board, Session::new(log), pairs, about.created_utc_ns)?;
     let took = started.elapsed().as_secs_f64();
 
     let report = Report::from_log(&log, &Options::default())?;
@@ -93,15 +93,14 @@ fn boot_id(seed: u64) -> u32 {
     (seed ^ (seed >> 32)) as u32 ^ 0x4C57_0001
 }
 
-/// Bytes from the board and the sample it has come to.
-type Batch = (Vec<u8>, u64);
+/// Bytes from the board, the sample it has come to, and the simulated time there, nanoseconds.
+type Batch = (Vec<u8>, u64, i64);
 
 /// Runs the board in a thread and its bytes through the session; the finished log.
 fn record(
     board: VirtualBoard<LineSource>,
     mut session: Session,
     pairs: u64,
-    rate_hz: f64,
     start_utc_ns: i64,
 ) -> anyhow::Result<Log> {
     let bar = terminal::progress_bar(pairs, "the time");
@@ -111,7 +110,7 @@ fn record(
         .stack_size(BOARD_STACK_BYTES)
         .spawn(move || run_board(board, &batches_out, &acknowledged))
         .context("could not start the board's thread; try again")?;
-    let outcome = receive(&mut session, &batches, &acknowledge, &bar, rate_hz, start_utc_ns);
+    let outcome = receive(&mut session, &batches, &acknowledge, &bar, start_utc_ns);
     // Closing our ends stops the board if we stopped first.
     drop((batches, acknowledge));
     let has_run = runner.join().is_ok();
@@ -133,7 +132,8 @@ fn run_board(mut board: VirtualBoard<LineSource>, batches: &SyncSender<Batch>, a
         let mut bytes = Vec::new();
         let Ok(is_more) = board.run_batch(&mut bytes);
         is_running = is_more;
-        if batches.send((bytes, board.next_sample())).is_err() {
+        let elapsed_ns = (board.source().now_s() * 1e9) as i64;
+        if batches.send((bytes, board.next_sample(), elapsed_ns)).is_err() {
             return;
         }
     }
@@ -144,15 +144,13 @@ fn receive(
     batches: &Receiver<Batch>,
     acknowledge: &Sender<u32>,
     bar: &indicatif::ProgressBar,
-    rate_hz: f64,
     start_utc_ns: i64,
 ) -> anyhow::Result<()> {
     let mut view = LiveView::default();
-    for (bytes, sample) in batches {
+    for (bytes, sample, elapsed_ns) in batches {
         let mut lines = Vec::new();
         let mut on_frame = |frame: &DeviceFrame| lines.extend(view.line(frame));
         // The simulated clock: the log's times run with the simulated pair, not with this machine.
-        let elapsed_ns = (sample as f64 / rate_hz * 1e9) as i64;
         let arrival = Arrival { utc_ns: start_utc_ns + elapsed_ns, monotonic_ns: elapsed_ns };
         session.receive(&bytes, arrival, &mut on_frame)?;
         session.flush()?;

@@ -95,9 +95,14 @@ impl LineSource {
         self.rates[self.heard].as_ref().map_or((0, 0), |heard| heard.waiting_events())
     }
 
+    /// Seconds from the first pair to the next one.
+    pub fn now_s(&self) -> f64 {
+        self.rates[self.heard].as_ref().map_or(0.0, |heard| heard.next() as f64 / heard.rate_hz())
+    }
+
     /// Goes over to the source of another rate at the present time; its rate in pairs per second.
     fn hear(&mut self, wanted: usize, factor: f64) -> Option<f64> {
-        let now_s = self.rates[self.heard].as_ref().map(|heard| heard.next() as f64 / heard.rate_hz())?;
+        let now_s = self.now_s();
         if self.rates[wanted].is_none() {
             let mut scenario = self.scenario.clone();
             scenario.sample_rate_hz *= factor;

@@ -9,8 +9,8 @@
 //!
 //! gives a candidate. A line is **confirmed** only if it stays put *and* nothing above could look the same:
 //! not if the same pair has another solution (a tone half way between multiples of the two rates folds onto
-//! the same place at both), not if another sighting of that level is where an alias would have gone, not if
-//! its tolerance is a fair part of the change of rate. What stays nowhere and folds nowhere has moved by
+//! the same place at both), not if another sighting of that level, which did not stay put itself, is where an
+//! alias would have gone, not if its tolerance is a fair part of the change of rate. What stays nowhere and folds nowhere has moved by
 //! itself, or was seen once: **unconfirmed**.
 
 /// Highest true frequency looked for, Hz.
@@ -73,15 +73,38 @@ pub fn check(
         return vec![AliasState::Unconfirmed; first.len()];
     }
     let rates = (first_rate_hz, second_rate_hz);
-    first.iter().map(|sighting| state(sighting, second, rates, TOLERANCE_SHARE * change_hz)).collect()
+    let widest_hz = TOLERANCE_SHARE * change_hz;
+    let stayed: Vec<bool> =
+        second.iter().map(|other| first.iter().any(|one| stays_put(one, other, widest_hz))).collect();
+    first.iter().map(|sighting| state(sighting, (second, &stayed), rates, widest_hz)).collect()
 }
 
-fn state(one: &Sighting, second: &[Sighting], rates: (f64, f64), widest_hz: f64) -> AliasState {
+/// Whether `other` is `one` again, at the same place.
+fn stays_put(one: &Sighting, other: &Sighting, widest_hz: f64) -> bool {
+    let tolerance_hz = one.tolerance_hz + other.tolerance_hz;
+    tolerance_hz <= widest_hz
+        && (one.frequency_hz - other.frequency_hz).abs() <= tolerance_hz
+        && level_factor(one, other) <= SAME_LEVEL
+}
+
+/// Larger level over the smaller one; infinite where there is none.
+fn level_factor(one: &Sighting, other: &Sighting) -> f64 {
+    let factor = one.level_v.max(other.level_v) / one.level_v.min(other.level_v);
+    if factor.is_nan() { f64::INFINITY } else { factor }
+}
+
+/// `stayed` tells which of `second` are sightings of lines that stay put.
+fn state(
+    one: &Sighting,
+    (second, stayed): (&[Sighting], &[bool]),
+    rates: (f64, f64),
+    widest_hz: f64,
+) -> AliasState {
     let mut candidates: Vec<Candidate> = Vec::new();
     let mut is_vague = false;
     for (number, other) in second.iter().enumerate() {
-        let level_factor = one.level_v.max(other.level_v) / one.level_v.min(other.level_v);
-        if level_factor.is_nan() || level_factor > SAME_LEVEL {
+        let level_factor = level_factor(one, other);
+        if level_factor > SAME_LEVEL {
             continue;
         }
         let tolerance_hz = one.tolerance_hz + other.tolerance_hz;
@@ -96,6 +119,11 @@ fn state(one: &Sighting, second: &[Sighting], rates: (f64, f64), widest_hz: f64)
             is_folded,
             second: number,
         }));
+    }
+    // A line that stays put is no image of one that does.
+    if let Some(own) = candidates.iter().find(|candidate| !candidate.is_folded).map(|own| own.second) {
+        let is_other_line = |number: usize| number != own && stayed.get(number) == Some(&true);
+        candidates.retain(|candidate| !candidate.is_folded || !is_other_line(candidate.second));
     }
     candidates.sort_by(|a, b| a.level_factor.total_cmp(&b.level_factor));
     judge(&candidates, is_vague)
@@ -112,11 +140,22 @@ fn judge(candidates: &[Candidate], is_vague: bool) -> AliasState {
         Some(stays) if stays.level_factor <= CLOSE_LEVEL && !is_vague && !rival(stays) => {
             AliasState::Confirmed
         }
-        _ if candidates.iter().any(|candidate| candidate.is_folded) => AliasState::Suspect {
-            candidates_hz: candidates.iter().map(|c| c.true_hz).take(MOST_CANDIDATES).collect(),
-        },
+        _ if candidates.iter().any(|candidate| candidate.is_folded) => {
+            AliasState::Suspect { candidates_hz: distinct(candidates) }
+        }
         _ => AliasState::Unconfirmed,
     }
+}
+
+/// True frequencies that differ by a thousandth or more.
+fn distinct(candidates: &[Candidate]) -> Vec<f64> {
+    let mut all: Vec<f64> = Vec::new();
+    for true_hz in candidates.iter().map(|candidate| candidate.true_hz) {
+        if all.len() < MOST_CANDIDATES && all.iter().all(|known| (known - true_hz).abs() >= 1e-3 * true_hz) {
+            all.push(true_hz);
+        }
+    }
+    all
 }
 
 /// True frequencies that show at `f1` and `f2`, each with whether it folds at either rate.
