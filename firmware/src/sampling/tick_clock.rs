@@ -26,13 +26,20 @@ impl TickClock {
         }
     }
 
-    /// Instants up to and including `ticks`. Before the last change: that of the change.
+    /// Instants up to and including `ticks`, which never fall.
     pub const fn scans(&self, ticks: u64) -> u64 {
-        self.base_scans + ticks.saturating_sub(self.base_ticks) / self.ticks_per_scan as u64
+        if ticks < self.base_ticks {
+            // The period given last does not hold yet; the instant at which it will is the next one.
+            return self.base_scans.saturating_sub(1);
+        }
+        self.base_scans + (ticks - self.base_ticks) / self.ticks_per_scan as u64
     }
 
     /// Ticks until the next instant, 1 at least.
     pub const fn ticks_left(&self, ticks: u64) -> u32 {
+        if ticks < self.base_ticks {
+            return (self.base_ticks - ticks) as u32;
+        }
         let passed = ticks.saturating_sub(self.base_ticks) % self.ticks_per_scan as u64;
         self.ticks_per_scan - passed as u32
     }

@@ -28,7 +28,7 @@ pub(crate) struct Averages {
     pub second: Vec<RungMean>,
     /// The second rate, full rate, Hz.
     pub second_rate_hz: Option<f64>,
-    /// Stored spectra that are in none of them.
+    /// Stored spectra that are in none of them, nor of a third rate near the main one.
     pub left_out: u64,
     /// Spectra of single modes at the full rate, where the log holds none of the ladder.
     pub single: PerMode<Option<Single>>,
@@ -128,11 +128,13 @@ fn read_ladder(connection: &Connection) -> Result<Averages, ReportError> {
         averages.by_set().filter(|mean| shapes.contains(&Shape::of(&mean.mean))).collect()
     };
     let used = |rate: &Rate| rate.rungs.values().map(|mean| mean.spectra).sum::<u64>();
+    // A third rate, the second one's counterpart on the other side, is left out on purpose.
+    let dithered: u64 = rates.iter().skip(1).filter(is_second).map(used).sum();
     Ok(Averages {
         by_set: by_set(&shapes(main)),
         second: second.map(|rate| by_set(&shapes(rate))).unwrap_or_default(),
         second_rate_hz: second.map(|rate| rate.full_hz),
-        left_out: stored + passed_over - used(main) - second.map_or(0, used),
+        left_out: stored + passed_over - used(main) - dithered,
         together: main.rungs.values().cloned().collect(),
         single: PerMode::default(),
     })

@@ -36,9 +36,19 @@ pub(crate) fn read(
     families.extend(traffic);
     let mut presences = follow(connection, averages, &families, calendar, list_limit)?.into_iter();
     let is_single = averages.is_single();
-    let sources =
+    let mut sources: Vec<Source> =
         families.iter().map(|family| source(family, is_single, presences.next().flatten())).collect();
+    let named = sources.len();
+    sources.retain(is_seen);
+    let left_out = left_out + named - sources.len();
     Ok((sources, left_out as u64))
+}
+
+/// Whether a source is more than a hump in the average of a whole night: seen in some spectrum by itself, or
+/// again at another rate.
+fn is_seen(source: &Source) -> bool {
+    let is_in_none = source.presence.as_ref().is_some_and(|presence| presence.first_start.is_none());
+    !is_in_none || source.alias == "confirmed" || source.kind == "traffic"
 }
 
 /// No log states the bit rate of the bus, so there is no hint.

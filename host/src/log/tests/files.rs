@@ -221,35 +221,47 @@ fn transactions_with_kept_messages_are_synced_and_others_are_not() {
     assert_eq!((count(&reader, "summary"), count(&reader, "gap")), (2, 1));
 }
 
-/// The bytes of a log that schema 1 wrote: one of each message it knew, by two boots 100 ms a frame.
-const LOG_OF_SCHEMA_1: &[u8] = include_bytes!("schema_1.sqlite");
+/// The bytes of logs that older schemas wrote: one of each message they knew, by two boots 100 ms a frame.
+const OLD_LOGS: [(i64, &[u8]); 2] =
+    [(1, include_bytes!("schema_1.sqlite")), (2, include_bytes!("schema_2.sqlite"))];
 
 #[test]
-fn a_log_of_schema_1_reads_as_it_did_and_lacks_what_is_new() {
+fn a_log_of_an_older_schema_reads_as_it_did_and_lacks_what_is_new() {
+    for (schema, bytes) in OLD_LOGS {
+        let directory = tempfile::tempdir().unwrap();
+        let path = directory.path().join("old.log");
+        std::fs::write(&path, bytes).unwrap();
+        let old = Log::open(&path).unwrap();
+        assert_eq!(only(&old, "PRAGMA user_version", |row| row.get_unwrap::<_, i64>(0)), schema);
+        let is_old = |message: &Message| match message {
+            Message::Spectra(_) => schema >= 2,
+            Message::Rate(_) => false,
+            _ => true,
+        };
+        let mut same = temporary();
+        let sent: Vec<_> = [BOOT, BOOT + 1]
+            .into_iter()
+            .flat_map(|boot| frames(boot, one_of_each().into_iter().filter(is_old)))
+            .collect();
+        for (index, frame) in sent.iter().enumerate() {
+            same.store(frame, at_ms(100 * index as i64)).unwrap();
+        }
+        same.finish().unwrap();
+        assert_eq!(dump(&old), dump(&same), "schema {schema}");
+        let spectra = if schema >= 2 { 4 } else { 0 };
+        assert_eq!((count(&old, "spectrum"), count(&old, "spectra"), count(&old, "rate")), (4, spectra, 0));
+        let report = Report::from_log(&old, &Options::default()).unwrap();
+        assert_eq!((report.recording.pairs, report.excursions.count), (14_400, 162));
+        drop(old);
+        assert_eq!(std::fs::read(&path).unwrap(), bytes, "the file was touched");
+    }
+}
+
+#[test]
+fn an_older_log_that_lacks_a_table_of_its_own_is_damaged() {
     let directory = tempfile::tempdir().unwrap();
     let path = directory.path().join("old.log");
-    std::fs::write(&path, LOG_OF_SCHEMA_1).unwrap();
-    let old = Log::open(&path).unwrap();
-    assert_eq!(only(&old, "PRAGMA user_version", |row| row.get_unwrap::<_, i64>(0)), 1);
-    let mut same = temporary();
-    let sent: Vec<_> = [BOOT, BOOT + 1]
-        .into_iter()
-        .flat_map(|boot| {
-            let is_old = |message: &Message| !matches!(message, Message::Spectra(_) | Message::Rate(_));
-            frames(boot, one_of_each().into_iter().filter(is_old))
-        })
-        .collect();
-    for (index, frame) in sent.iter().enumerate() {
-        same.store(frame, at_ms(100 * index as i64)).unwrap();
-    }
-    same.finish().unwrap();
-    assert_eq!(dump(&old), dump(&same));
-    assert_eq!((count(&old, "spectrum"), count(&old, "spectra")), (4, 0));
-    let report = Report::from_log(&old, &Options::default()).unwrap();
-    assert_eq!((report.recording.pairs, report.excursions.count), (14_400, 162));
-    drop(old);
-    assert_eq!(std::fs::read(&path).unwrap(), LOG_OF_SCHEMA_1, "the file was touched");
-
+    std::fs::write(&path, OLD_LOGS[0].1).unwrap();
     Connection::open(&path).unwrap().execute_batch("DROP TABLE spectrum").unwrap();
     assert!(matches!(try_open(&path), LogError::Damaged), "its own tables must be there");
 }

@@ -79,12 +79,10 @@ pub fn check(
     first.iter().map(|sighting| state(sighting, (second, &stayed), rates, widest_hz)).collect()
 }
 
-/// Whether `other` is `one` again, at the same place.
+/// Whether `other` is `one` again, at the same place, whatever its level then.
 fn stays_put(one: &Sighting, other: &Sighting, widest_hz: f64) -> bool {
     let tolerance_hz = one.tolerance_hz + other.tolerance_hz;
-    tolerance_hz <= widest_hz
-        && (one.frequency_hz - other.frequency_hz).abs() <= tolerance_hz
-        && level_factor(one, other) <= SAME_LEVEL
+    tolerance_hz <= widest_hz && (one.frequency_hz - other.frequency_hz).abs() <= tolerance_hz
 }
 
 /// Larger level over the smaller one; infinite where there is none.
@@ -120,11 +118,11 @@ fn state(
             second: number,
         }));
     }
-    // A line that stays put is no image of one that does.
-    if let Some(own) = candidates.iter().find(|candidate| !candidate.is_folded).map(|own| own.second) {
-        let is_other_line = |number: usize| number != own && stayed.get(number) == Some(&true);
-        candidates.retain(|candidate| !candidate.is_folded || !is_other_line(candidate.second));
-    }
+    // A line that stays put is no image of another.
+    let own = candidates.iter().find(|candidate| !candidate.is_folded).map(|own| own.second);
+    candidates.retain(|candidate| {
+        !candidate.is_folded || own == Some(candidate.second) || stayed.get(candidate.second) != Some(&true)
+    });
     candidates.sort_by(|a, b| a.level_factor.total_cmp(&b.level_factor));
     judge(&candidates, is_vague)
 }
