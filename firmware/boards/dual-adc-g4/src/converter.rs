@@ -1,8 +1,8 @@
 //! Converters 1 and 2 in regular simultaneous mode, triggered by timer 6, emptied by DMA into a ring.
 //!
 //! ```text
-//!  TIM6 update ─► ADC1: leg A (buffer 1), marker A ─┐ 32-bit word   DMA1 ch 1   ring of 3072 words
-//!  250 kHz        ADC2: leg B (buffer 2), marker B ─┴─ CDR ─────────circular──► = 1536 scans, 6.1 ms
+//!  TIM6 update ─► ADC1: leg A (buffer 1), marker A ─┐ 32-bit word   DMA1 ch 1   ring of 4096 words
+//!  250 kHz        ADC2: leg B (buffer 2), marker B ─┴─ CDR ─────────circular──► = 2048 scans, 8.2 ms
 //!  TIM5 counts ticks of the same clock: that of the sample index
 //! ```
 //! Registers: reference manual RM0440, from memory and from the register crate; not verified on a chip.
@@ -34,8 +34,8 @@ const fn rate_mhz(ticks_per_pair: u32) -> u64 {
     CORE_HZ as u64 * 1_000 / ticks_per_pair as u64
 }
 
-/// Words of the ring: six blocks of 256 pairs.
-const RING_WORDS: usize = 3_072;
+/// Words of the ring: eight blocks of 256 pairs.
+const RING_WORDS: usize = 4_096;
 /// Written by the DMA channel, read by [`DualConverter::word`] only. Atomics, because another master
 /// writes them: each read really reads.
 static RING: [AtomicU32; RING_WORDS] = [const { AtomicU32::new(0) }; RING_WORDS];

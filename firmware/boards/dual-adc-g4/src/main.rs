@@ -33,7 +33,7 @@ use stm32g4xx_hal::time::{ExtU32, RateExtU32};
 use stm32g4xx_hal::usb;
 
 /// Outbox: kept and passing messages, bytes.
-const KEPT_BYTES: usize = 6 * 1024;
+const KEPT_BYTES: usize = 8 * 1024;
 const PASSING_BYTES: usize = 6 * 1024;
 /// One segment in four is transformed: even a storm then leaves time to spare (README.md, "How fast").
 const SPECTRUM_SKIP: u16 = 3;
