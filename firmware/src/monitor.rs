@@ -19,7 +19,7 @@ use legwise_protocol::command::Command;
 use legwise_protocol::decoder::RequestDecoder;
 use legwise_protocol::framing::{DELIMITER, DEVICE_FRAME_BYTES};
 use legwise_protocol::message::{
-    EndCause, GapCause, Hello, Message, NAME_BYTES, Outcome, Reply, ResetCause, Settings,
+    EndCause, GapCause, Hello, Message, NAME_BYTES, Outcome, RateChange, Reply, ResetCause, Settings,
 };
 
 /// Who a device is.
@@ -120,6 +120,8 @@ pub struct Monitor<S, L, P, B, M> {
     frame_sent: usize,
     has_obeyed: bool,
     dither: Schedule,
+    /// The rate the source has gone over to, once it has.
+    rate: Option<RateChange>,
     /// Passing messages shed that the pipeline has been told of.
     told_shed: u32,
     /// Whether the first step has been made.
@@ -165,6 +167,7 @@ where
             frame_sent: 0,
             has_obeyed: false,
             dither: Schedule::new(description.sample_rate_mhz),
+            rate: None,
             told_shed: 0,
             is_introduced: false,
             ending: None,
@@ -283,6 +286,7 @@ where
             let change = self.source.tune(tuning);
             self.dither.changed(change);
             if let Some(change) = change {
+                self.rate = Some(change);
                 pipeline.change_rate(change, &mut |message, sample| outbox.record(message, sample));
             }
         }
@@ -416,6 +420,10 @@ where
         let sample = self.pipeline.next_sample();
         self.memory.outbox.record(&Message::Hello(hello), sample);
         self.memory.outbox.record(&Message::Settings(*self.pipeline.settings()), sample);
+        // A host that comes late learns which rate holds.
+        if let Some(change) = self.rate {
+            self.memory.outbox.record(&Message::Rate(change), sample);
+        }
     }
 }
 

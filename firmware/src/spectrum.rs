@@ -23,7 +23,7 @@
 //!
 //! Segments may be skipped to save time; the message then says how many. The filters of the ladder see
 //! every sample. After a gap filters and segments begin anew, the averages go on. Where the rate changes the
-//! averages made so far are sent before new ones begin: a few tenths of a second are in no spectrum.
+//! averages made so far are sent before new ones begin: about a second is in no spectrum.
 
 mod full;
 mod pace;
@@ -226,6 +226,7 @@ impl SpectrumMeter {
     fn send_due(&mut self, sample: u64, reporting: &Reporting, records: &mut dyn FnMut(&Message)) {
         let segments = if self.is_winding_up { None } else { Some(self.pace.segments(reporting)) };
         match self.send_one(segments, records) {
+            Some(number) if self.is_winding_up => self.pace.hurried(sample, number.is_full(), reporting),
             Some(number) => self.pace.sent(sample, number.is_full(), reporting),
             None if self.is_winding_up => self.begin_anew(sample),
             None => {}

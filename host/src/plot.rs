@@ -38,7 +38,7 @@ pub enum PlotError {
     /// Nothing to draw.
     #[error(
         "could not plot: there are no averaged spectra of both modes in it; try a longer recording (some seconds) \
-         or a board with firmware of wire version 2"
+         or a board with firmware of wire version 2 or later"
     )]
     NoSpectra,
     /// Neither of the two kinds of picture.
@@ -176,7 +176,10 @@ impl Plot {
         }
         let records = ladder.records();
         let input = Input { records: &records, board, common_noise_v2_per_hz: None };
-        let points = conversion::conversion(&input, &Settings::default());
+        let skew_samples =
+            report.recording.sample_rate_hz.unwrap_or(0.0) * report.recording.skew_ns as f64 * 1e-9;
+        let settings = Settings { skew_samples, ..Settings::default() };
+        let points = conversion::conversion(&input, &settings);
         let low_hz = points.iter().map(|point| point.band_hz.0).fold(f64::INFINITY, f64::min);
         let high_hz = points.iter().map(|point| point.band_hz.1).fold(0.0, f64::max);
         let floor = board.map(|board| floor_of(board, seen_hz)).unwrap_or_default();
@@ -346,7 +349,7 @@ fn notes(has_floor: bool) -> Vec<String> {
         "One-sided densities, Hann window, mean of each segment removed. Rungs join at 0.35 of the lower one's rate; driven \
          segments of a slower rung hold more rest: their curves step there."
             .to_owned(),
-        "Any line may be the image of one above half the rate. Near half the rate levels read low by what the front end \
+        "A line may be the image of one above half the rate; the report says which were checked. Near half the rate levels read low by what the front end \
          takes away; its corner is not in the log."
             .to_owned(),
         format!("Conversion: differential volt per common volt, from idle segments. {board}"),

@@ -47,6 +47,7 @@ fn from_csv(column: usize, has_coherence: bool, segments: u64, is_overlapped: bo
         segments,
         skipped: 0,
         is_overlapped,
+        other: 0,
         first_sample: 0,
         span_samples: 16_384,
         first_bin: 0,

@@ -21,12 +21,12 @@ const STACK_BYTES: usize = 64 << 20;
 const HUM_HIDDEN: &str = "no-bias";
 
 fn report_of(name: &str) -> (Scenario, Report) {
-    report_on(scenarios::by_name(name).unwrap())
+    report_on(scenarios::by_name(name).unwrap(), MINUTES)
 }
 
-fn report_on(scenario: Scenario) -> (Scenario, Report) {
+fn report_on(scenario: Scenario, minutes: f64) -> (Scenario, Report) {
     let run = move || {
-        let source = LineSource::new(&scenario, 1, Length::Minutes(MINUTES)).unwrap();
+        let source = LineSource::new(&scenario, 1, Length::Minutes(minutes)).unwrap();
         let watching = Watching::named(Some(&scenario.receiver)).unwrap();
         let settings = watching.desktop_settings(source.describe().sample_rate_mhz);
         let about = About {
@@ -156,7 +156,7 @@ fn a_line_above_half_the_rate_gives_itself_away_and_one_below_is_confirmed() {
              source.switching-supply = {{ hz = {hz:?}, peak_v = 1.0, drift_hz = 0.0, drift_period_s = 1.0, rise_s = 0.1 }}\n"
         );
         let night = scenarios::text_of("quiet-night").unwrap();
-        let (_, report) = report_on(Scenario::from_toml(&format!("{night}\n{text}")).unwrap());
+        let (_, report) = report_on(Scenario::from_toml(&format!("{night}\n{text}")).unwrap(), MINUTES);
         print("supply", &report);
         report.spectrum
     };
@@ -173,4 +173,20 @@ fn a_line_above_half_the_rate_gives_itself_away_and_one_below_is_confirmed() {
     assert_eq!(confirmed.alias, "confirmed", "{confirmed:?}");
     let mains = plain.sources.iter().find(|source| source.kind == "mains").unwrap();
     assert_eq!(mains.alias, "confirmed", "{mains:?}");
+}
+
+/// Six minutes: the rate is moved twice.
+#[test]
+fn where_the_rate_moves_nothing_is_missed_and_nothing_accused() {
+    for name in ["quiet-night", "drive-bay"] {
+        let (_, report) = report_on(scenarios::by_name(name).unwrap(), 6.0);
+        print(name, &report);
+        let sources = &report.spectrum.sources;
+        let traffic = sources.iter().find(|source| source.kind == "traffic").unwrap();
+        let presence = traffic.presence.as_ref().unwrap();
+        assert_eq!((presence.share, presence.stretches), (1.0, 1), "{name}: {presence:?}");
+        let mains = sources.iter().find(|source| source.kind == "mains").unwrap();
+        assert_eq!(mains.alias, "confirmed", "{name}: {mains:?}");
+        assert!(sources.iter().all(|source| source.alias != "suspect"), "{name}: {sources:?}");
+    }
 }

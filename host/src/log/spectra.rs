@@ -23,7 +23,7 @@ pub fn visit<E: From<rusqlite::Error>>(
     let table = BinTable::new();
     let mut statement = connection.prepare(
         "SELECT spectra.run, first_sample, span_samples, segment_set, rung, points, segments, skipped, \
-         first_bin, codes FROM spectra ORDER BY 1, 2, 5, 4",
+         first_bin, codes, other FROM spectra ORDER BY 1, 2, 5, 4",
     )?;
     let mut rows = statement.query([])?;
     let mut spectra = RungSpectra {
@@ -34,6 +34,7 @@ pub fn visit<E: From<rusqlite::Error>>(
         segments: 0,
         skipped: 0,
         is_overlapped: false,
+        other: 0,
         first_sample: 0,
         span_samples: 0,
         first_bin: 0,
@@ -80,6 +81,7 @@ fn read(row: &Row<'_>, table: &BinTable, spectra: &mut RungSpectra) -> rusqlite:
     (spectra.first_sample, spectra.span_samples) = (first_sample, span_samples);
     (spectra.segments, spectra.skipped) = (segments, skipped);
     spectra.is_overlapped = skipped == 0;
+    spectra.other = number(10)?.unwrap_or(0);
     spectra.first_bin = first_bin.into();
     let codes = row.get_ref(9)?.as_blob().map_err(rusqlite::Error::from)?;
     Ok(table.decode_all(codes, &mut spectra.bins))

@@ -209,6 +209,7 @@ fn spectra_of_both_modes_come_back_whole_in_order_of_time() {
         segments: 65,
         skipped: 66,
         is_overlapped: false,
+        other: 67,
         first_sample,
         span_samples: 64,
         first_bin: 30,

@@ -61,6 +61,7 @@ impl Averages {
             segments: common.density.segments,
             skipped: common.skipped,
             is_overlapped: common.skipped == 0,
+            other: 0,
             first_sample: 0,
             span_samples: 0,
             first_bin: 0,

@@ -25,14 +25,16 @@ const TELLING_LIMIT: f64 = 0.1;
 const SAME_SHARE: f64 = 0.15;
 
 /// Both directions: common to differential, then differential to common.
-pub(crate) fn read(averages: &Averages, floor: Option<&ConversionFloor>) -> [Conversion; 2] {
+/// `skew_ns` is how much later leg B is sampled.
+pub(crate) fn read(averages: &Averages, skew_ns: i64, floor: Option<&ConversionFloor>) -> [Conversion; 2] {
     let records: Vec<Record<'_>> = averages
         .by_set
         .iter()
         .map(|mean| Record { spectra: &mean.mean, coding: Coding::Wire { averages: mean.spectra } })
         .collect();
     let input = Input { records: &records, board: floor, common_noise_v2_per_hz: None };
-    let settings = Settings::default();
+    let skew_samples = averages.rate_hz().unwrap_or(0.0) * skew_ns as f64 * 1e-9;
+    let settings = Settings { skew_samples, ..Settings::default() };
     let curves = [
         (Direction::Conversion, conversion::conversion(&input, &settings)),
         (Direction::DriverImbalance, conversion::driver_imbalance(&input, &settings)),
@@ -150,6 +152,7 @@ fn verdict(point: &Point) -> &'static str {
             LimitReason::BelowBoardFloor => "below-board",
             LimitReason::LegNoise => "leg-noise",
             LimitReason::RivalDirection => "other-direction",
+            LimitReason::Folded => "folded",
         },
         Verdict::Refused(_) => "refused",
     }
@@ -197,6 +200,11 @@ fn high_limit(first: &ConversionPoint, direction: Direction) -> String {
         Direction::DriverImbalance => "too little data while the bus is driven",
     };
     let limit = ratio(first.magnitude_high.unwrap_or(f64::INFINITY));
+    let lacking = if first.verdict == "folded" {
+        "on legs sampled one after the other content folded down from above half the rate looks the same"
+    } else {
+        lacking
+    };
     format!("not known: {lacking} (no more than {limit} at {})", hertz(first.frequency_hz))
 }
 
@@ -205,6 +213,7 @@ fn reason(verdict: &str) -> &'static str {
         "below-board" => "; the board itself converts as much",
         "leg-noise" => "; noise of the legs could do as much",
         "other-direction" => "; the other direction could do as much",
+        "folded" => "; content folded down from above half the rate could do as much",
         _ => "",
     }
 }

@@ -148,7 +148,8 @@ fn spectrum(
     for mode in [&mut modes.common, &mut modes.differential].into_iter().flatten() {
         lines::mark_aliases(mode, &sources);
     }
-    let [conversion, driver_imbalance] = conversion::read(&averages, options.floor.as_ref());
+    let skew_ns = runs.iter().map(|run| run.skew_ns).max_by_key(|skew| skew.abs()).unwrap_or(0);
+    let [conversion, driver_imbalance] = conversion::read(&averages, skew_ns, options.floor.as_ref());
     Ok(model::Spectra {
         common: modes.common,
         differential: modes.differential,

@@ -47,7 +47,7 @@ pub(crate) fn read(
 /// Whether a source is more than a hump in the average of a whole night: seen in some spectrum by itself, or
 /// again at another rate.
 fn is_seen(source: &Source) -> bool {
-    let is_in_none = source.presence.as_ref().is_some_and(|presence| presence.first_start.is_none());
+    let is_in_none = source.presence.as_ref().is_some_and(|presence| presence.stretches == 0);
     !is_in_none || source.alias == "confirmed" || source.kind == "traffic"
 }
 

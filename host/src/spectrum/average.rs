@@ -164,6 +164,7 @@ mod tests {
             segments,
             skipped: 5,
             is_overlapped: false,
+            other: 0,
             first_sample,
             span_samples: 1_000,
             first_bin: 4,

@@ -76,6 +76,10 @@ pub struct Input<'a> {
     pub common_noise_v2_per_hz: Option<f64>,
 }
 
+/// Times the sampling rate up to which folded content is reckoned with; a front end takes off more above
+/// (assumed, no source).
+const FOLDS: u32 = 3;
+
 /// What to test, and how strictly.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Settings {
@@ -85,11 +89,29 @@ pub struct Settings {
     pub points_per_decade: f64,
     /// Lines of the asking mode per rung that get a point of their own, strongest first.
     pub most_lines: usize,
+    /// Sampling rate times how much later leg B is sampled: 0 where both are sampled at once.
+    pub skew_samples: f64,
 }
 
 impl Default for Settings {
     fn default() -> Self {
-        Self { false_claim_level: 0.01, points_per_decade: 24.0, most_lines: 48 }
+        Self { false_claim_level: 0.01, points_per_decade: 24.0, most_lines: 48, skew_samples: 0.0 }
+    }
+}
+
+impl Settings {
+    /// The highest ratio that content folded down from near 1 to [`FOLDS`] times the rate could show.
+    fn folded_ratio(&self, direction: Direction) -> f64 {
+        let of = |fold: u32| {
+            let turned = std::f64::consts::PI * f64::from(fold) * self.skew_samples.abs();
+            // Beyond a quarter of a turn nothing is certain: one leg alone makes 2.
+            if turned % std::f64::consts::PI > 0.78 { 2.0 } else { (2.0 * turned.tan().abs()).min(2.0) }
+        };
+        let highest = (1..=FOLDS).map(of).fold(0.0, f64::max);
+        match direction {
+            Direction::Conversion => highest,
+            Direction::DriverImbalance => highest / 4.0,
+        }
     }
 }
 
@@ -219,6 +241,14 @@ pub fn driver_imbalance(input: &Input, settings: &Settings) -> Vec<Point> {
     curve(input, settings, Direction::DriverImbalance)
 }
 
+/// How a place is tested.
+#[derive(Clone, Copy)]
+struct Test {
+    significance: f64,
+    direction: Direction,
+    folded_ratio: f64,
+}
+
 /// Every place with what was pooled there.
 fn curve(input: &Input, settings: &Settings, direction: Direction) -> Vec<Point> {
     let places = grid::places(input.records, settings, direction);
@@ -229,7 +259,8 @@ fn curve(input: &Input, settings: &Settings, direction: Direction) -> Vec<Point>
     };
     let tested = pooled.iter().filter(|(_, pool)| is_tested(pool)).count().max(1);
     let significance = settings.false_claim_level / tested as f64;
-    pooled.into_iter().map(|(place, pool)| point(input, place, pool, significance, direction)).collect()
+    let test = Test { significance, direction, folded_ratio: settings.folded_ratio(direction) };
+    pooled.into_iter().map(|(place, pool)| point(input, place, pool, test)).collect()
 }
 
 /// The pool of a place in the set that `direction` rests on.
@@ -243,7 +274,8 @@ fn find<'a>(records: &[Record<'a>], rung: u8, set: SegmentSet) -> Option<Record<
     records.iter().copied().find(|record| record.spectra.rung == rung && record.spectra.set == set)
 }
 
-fn point(input: &Input, place: &Place, pool: Option<Pool>, significance: f64, direction: Direction) -> Point {
+fn point(input: &Input, place: &Place, pool: Option<Pool>, test: Test) -> Point {
+    let Test { significance, direction, folded_ratio } = test;
     let mut point = Point {
         frequency_hz: place.frequency_hz,
         band_hz: place.band_hz,
@@ -280,7 +312,7 @@ fn point(input: &Input, place: &Place, pool: Option<Pool>, significance: f64, di
     point.board_floor = own.map(|own| own.magnitude_with_radius());
     point.input_noise = noise;
     let rival = Rival::of(input, place, &pool, direction);
-    point.verdict = verdict::of(&point, &pool, common_noise, &rival, direction);
+    point.verdict = verdict::of(&point, &pool, common_noise, &rival, (direction, folded_ratio));
     point
 }
 

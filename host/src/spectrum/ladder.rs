@@ -145,6 +145,7 @@ mod tests {
             segments,
             skipped: 0,
             is_overlapped: true,
+            other: 0,
             first_sample: 0,
             span_samples: 1000,
             first_bin,

@@ -60,6 +60,8 @@ pub struct RungSpectra {
     pub skipped: u64,
     /// Whether consecutive segments overlap by half: none was skipped.
     pub is_overlapped: bool,
+    /// Segments passed over meanwhile because they belong to the other set.
+    pub other: u64,
     /// First pair of the first segment, full rate.
     pub first_sample: u64,
     /// From there to the last pair of the last segment, full rate.
@@ -173,6 +175,7 @@ mod tests {
             segments: 50,
             skipped: 0,
             is_overlapped: true,
+            other: 0,
             first_sample: 0,
             span_samples: 100_000,
             first_bin,

@@ -259,6 +259,7 @@ impl Sums {
             segments: self.segments,
             skipped: 0,
             is_overlapped: true,
+            other: 0,
             first_sample: 0,
             span_samples,
             first_bin: 0,

@@ -82,6 +82,7 @@ fn average(
         segments: segments as u64,
         skipped: 0,
         is_overlapped: false,
+        other: 0,
         first_sample: 0,
         span_samples: (seconds * rate_hz) as u64,
         first_bin,

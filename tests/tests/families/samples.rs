@@ -178,6 +178,7 @@ fn rung_averages(
         segments: 0,
         skipped: 0,
         is_overlapped: true,
+        other: 0,
         first_sample: 0,
         span_samples: driven.len() as u64 - 1,
         first_bin,

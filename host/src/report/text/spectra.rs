@@ -119,7 +119,7 @@ fn alias(source: &Source) -> String {
             let shows = source.lines.first().map_or(0.0, |line| line.frequency_hz);
             format!("ALIAS SUSPECT: shows at {}, truly {}", figures::hertz(shows), candidates.join(" or "))
         }
-        _ => "not confirmed at the second rate".to_string(),
+        _ => "not confirmed: not found again while the rate was moved".to_string(),
     }
 }
 

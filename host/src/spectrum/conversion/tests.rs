@@ -13,6 +13,7 @@ fn spectra(rung: u8, set: SegmentSet, segments: u64, bin: RungBin) -> RungSpectr
         segments,
         skipped: 0,
         is_overlapped: true,
+        other: 0,
         first_sample: 0,
         span_samples: 512 * (segments + 1),
         first_bin: 0,
@@ -107,6 +108,23 @@ fn too_few_idle_segments_are_refused_at_every_frequency() {
     let points = points_of(&[spectra(0, SegmentSet::Driven, 500, driven(0.02))], None);
     assert!(points.len() > 40);
     assert!(points.iter().all(|p| p.verdict == Verdict::Refused(Refusal::TooFewSegments { effective: 0.0 })));
+}
+
+/// Content near n times the rate, folded down, shows `2 tan(π n fs δ)` where the true ratio is nothing.
+#[test]
+fn what_a_skew_makes_of_folded_content_is_no_conversion() {
+    let idle = spectra(0, SegmentSet::Idle, 300, converting((0.2, 0.0), 1e-10));
+    let records = [Record { spectra: &idle, coding: Coding::Exact }];
+    let input = Input { records: &records, ..Input::default() };
+    let verdicts = |skew_samples: f64| {
+        let points = conversion(&input, &Settings { skew_samples, ..Settings::default() });
+        points.into_iter().map(|point| point.verdict).collect::<Vec<_>>()
+    };
+    assert!(verdicts(0.001).iter().all(|verdict| *verdict == Verdict::Significant));
+    let is_folded = |verdict: &Verdict| matches!(verdict, Verdict::UpperLimit { reason: LimitReason::Folded, magnitude } if *magnitude > 0.2);
+    for skew_samples in [0.04, -0.04, 0.5, 1.0 / 3.0] {
+        assert!(verdicts(skew_samples).iter().all(is_folded), "{skew_samples}");
+    }
 }
 
 #[test]

@@ -8,6 +8,9 @@
 //! * the rival direction. If the idle set held data of an unbalanced driver, `S_cd = conj(I)·S_dd,data`,
 //!   and the data are at most all of `S_dd`: the bound is `|I|·S_dd/S_cc`, with I from the driven set. With
 //!   an idle set full of data it equals the ratio itself. The other way round likewise;
+//! * a skew between the legs. Content folded down from near n times the rate is turned back by the phase of
+//!   where it shows, not of where it was: `2π n fs δ` is left of a skew δ, and the common mode alone then makes
+//!   `|H| = 2 |tan(π n fs δ)|` (from the definition of the modes), a differential mode a quarter of that;
 //! * one leg alone makes |H| = 2 and |I| = 1/2: more is the rival direction for certain.
 
 use super::pool::Pool;
@@ -57,6 +60,8 @@ pub enum LimitReason {
     LegNoise,
     /// The other direction, from segments of the wrong set, would do the same.
     RivalDirection,
+    /// Leg B is sampled later: content folded down from above half the rate would do the same.
+    Folded,
 }
 
 /// Why nothing is said.
@@ -128,7 +133,9 @@ fn asking_share(direction: Direction) -> f64 {
 fn common_noise_of(pool: &Pool, known: Option<f64>, direction: Direction) -> f64 {
     let rest = region::unexplained(pool) * pool.answering;
     match (known, direction) {
-        (Some(noise), _) => noise.max(0.0) * pool.bins as f64,
+        (Some(noise), Direction::Conversion) => noise.max(0.0) * pool.bins as f64,
+        // What else lies in the common mode, a drive above all, is no less there because the board is quiet.
+        (Some(noise), Direction::DriverImbalance) => rest.max(noise * pool.bins as f64),
         (None, Direction::Conversion) => rest / DIFFERENTIAL_PER_COMMON,
         (None, Direction::DriverImbalance) => rest,
     }
@@ -198,7 +205,7 @@ pub(super) fn of(
     pool: &Pool,
     known_noise: Option<f64>,
     rival: &Rival,
-    direction: Direction,
+    (direction, folded_ratio): (Direction, f64),
 ) -> Verdict {
     let lowest = point.magnitude() - point.radius;
     let leg_noise = 2.0 * LEG_INEQUALITY * common_noise_of(pool, known_noise, direction) / pool.asking;
@@ -220,6 +227,8 @@ pub(super) fn of(
         (LimitReason::LegNoise, leg_noise)
     } else if lowest <= rival.share {
         (LimitReason::RivalDirection, rival.share)
+    } else if lowest <= folded_ratio {
+        (LimitReason::Folded, folded_ratio)
     } else {
         return Verdict::Significant;
     };

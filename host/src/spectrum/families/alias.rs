@@ -75,14 +75,13 @@ pub fn check(
     let rates = (first_rate_hz, second_rate_hz);
     let widest_hz = TOLERANCE_SHARE * change_hz;
     let stayed: Vec<bool> =
-        second.iter().map(|other| first.iter().any(|one| stays_put(one, other, widest_hz))).collect();
+        second.iter().map(|other| first.iter().any(|one| stays_put(one, other))).collect();
     first.iter().map(|sighting| state(sighting, (second, &stayed), rates, widest_hz)).collect()
 }
 
-/// Whether `other` is `one` again, at the same place, whatever its level then.
-fn stays_put(one: &Sighting, other: &Sighting, widest_hz: f64) -> bool {
-    let tolerance_hz = one.tolerance_hz + other.tolerance_hz;
-    tolerance_hz <= widest_hz && (one.frequency_hz - other.frequency_hz).abs() <= tolerance_hz
+/// Whether `other` is `one` again, at the same place, whatever its level then and however broad.
+fn stays_put(one: &Sighting, other: &Sighting) -> bool {
+    (one.frequency_hz - other.frequency_hz).abs() <= one.tolerance_hz + other.tolerance_hz
 }
 
 /// Larger level over the smaller one; infinite where there is none.

@@ -113,7 +113,11 @@ impl<'a> Watch<'a> {
             return;
         }
         let is_seen = if self.is_traffic() {
-            spectra.set == SegmentSet::Driven && spectra.segments > 0
+            // An average of idle segments counts the driven ones it left out.
+            match spectra.set {
+                SegmentSet::Driven => spectra.segments > 0,
+                SegmentSet::Idle => spectra.other > 0,
+            }
         } else {
             let Some(is_seen) = self.sees(spectra) else { return };
             is_seen

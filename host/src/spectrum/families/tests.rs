@@ -120,6 +120,7 @@ fn rung(number: u8, set: SegmentSet, lines: &[(Mode, f64, f64)]) -> RungSpectra 
         segments: 40,
         skipped: 0,
         is_overlapped: false,
+        other: 0,
         first_sample: 0,
         span_samples: 1_000_000,
         first_bin,
