@@ -1,22 +1,40 @@
 //! The device's sample counter on the calendar.
 //!
-//! Each row of `clock` is an arrival: `utc = offset + sample / rate + delay`, delay never negative.
-//! The row with the smallest `utc - sample / rate` was delayed least; it anchors the run, and the
-//! nominal rate carries from there (or, stretch by stretch, the rates the device says it went over to,
-//! [`super::rate`]). That is the touching point of the lower envelope of arrivals
-//! (Zhang, Liu and Xia, *Clock synchronization algorithms for network measurements*, INFOCOM 2002);
-//! its slope, the error of the device's crystal, is not fitted but shown as uncertainty: how far the
-//! least offsets of the first and the last quarter of the run lie apart, times 4/3, because a steady
-//! drift moves these two by three quarters of what it adds up to. The shortest delay itself cannot
-//! be seen one-way and stays in the result.
+//! Each row of `clock` is an arrival: `utc = offset + elapsed(sample) + delay`, delay never negative. Below all
+//! arrivals of ten minutes lies a line ([`envelope`]) whose slope is the error of the device's crystal then;
+//! windows overlap by half and each counts for its middle, so that a crystal that warms and cools is followed.
+//! The time a counter stands for is that of [`super::rate`].
+//!
+//! Where the computer's clock was set, or stood still while the computer slept, wall clock and monotonic clock
+//! move against each other: there the fit begins anew, so that every instant is told by the wall clock that
+//! was in force.
+//!
+//! The uncertainty of an instant is how far neighbouring windows disagree where one takes over from the other,
+//! and the shortest delay, which cannot be seen one-way. A stretch of less than two minutes has no slope of
+//! its own: there the least delayed arrival anchors the nominal rate, and the uncertainty is how far the least
+//! offsets of the first and the last quarter lie apart, times 4/3, because a steady drift moves these two by
+//! three quarters of what it adds up to.
+
+pub mod envelope;
 
 use super::rate::Rates;
 use super::{Log, LogError};
+use envelope::Line;
 use jiff::Timestamp;
 
 /// Least uncertainty claimed: the one-way delay that no fit can see, over USB. A serial bridge with
-/// a latency timer has up to 20 ms, which shows as spread only in part (common practice, no source).
+/// a latency timer has up to 20 ms, of which the least is what counts (common practice, no source).
 const LEAST_UNCERTAINTY_NS: i64 = 2_000_000;
+/// Length of a window, nanoseconds.
+const WINDOW_NS: i128 = 600_000_000_000;
+/// Shorter stretches have no slope of their own.
+const SHORT_NS: i128 = 120_000_000_000;
+/// ... nor do those with fewer arrivals.
+const FEW: usize = 16;
+/// Steeper lines are no crystal: 1 %.
+const STEEPEST: f64 = 0.01;
+/// Wall and monotonic clock that move apart by more between two arrivals: one of them was set or stood still.
+const STEP_NS: i64 = 5_000_000;
 
 /// An instant with how far it may be off.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -28,11 +46,31 @@ pub struct Instant {
 }
 
 /// Counter to UTC for one run.
-#[derive(Clone, Debug, PartialEq, Eq)]
+#[derive(Clone, Debug, PartialEq)]
 pub struct RunClock {
-    offset_ns: i128,
     rates: Rates,
+    /// In order; at least one.
+    pieces: Vec<Piece>,
+}
+
+/// What holds from a sample on.
+#[derive(Clone, Copy, Debug, PartialEq)]
+struct Piece {
+    from_sample: u64,
+    /// `utc - elapsed` is `base_ns` plus the line's height at `elapsed - origin_ns`, all in nanoseconds.
+    base_ns: i128,
+    origin_ns: i128,
+    line: Line,
     uncertainty_ns: i64,
+}
+
+/// An arrival: sample, the time it stands for, and the two clocks of the computer.
+#[derive(Clone, Copy, Debug)]
+struct Arrived {
+    sample: u64,
+    elapsed_ns: i128,
+    utc_ns: i64,
+    monotonic_ns: i64,
 }
 
 impl RunClock {
@@ -43,31 +81,135 @@ impl RunClock {
     pub fn load(log: &Log, run: i64) -> Result<Option<Self>, LogError> {
         let connection = log.connection();
         let Some(rates) = Rates::load(connection, run)? else { return Ok(None) };
-        let mut statement =
-            connection.prepare_cached("SELECT sample, utc_ns FROM clock WHERE run = ? ORDER BY sample")?;
-        let offset = |row: &rusqlite::Row<'_>| {
-            let (sample, utc_ns): (i64, i64) = (row.get(0)?, row.get(1)?);
-            Ok(i128::from(utc_ns) - rates.elapsed_ns(u64::try_from(sample).unwrap_or(0)))
-        };
-        let offsets: Vec<i128> = statement.query_map([run], offset)?.collect::<Result<_, _>>()?;
-        Ok(Self::fit(&offsets, rates))
-    }
-
-    /// From offsets `utc - sample / rate` in order of samples.
-    fn fit(offsets_ns: &[i128], rates: Rates) -> Option<Self> {
-        let offset_ns = *offsets_ns.iter().min()?;
-        let quarter = offsets_ns.len().div_ceil(4);
-        let first = *offsets_ns.iter().take(quarter).min()?;
-        let last = *offsets_ns.iter().rev().take(quarter).min()?;
-        let spread = i64::try_from((first - last).abs() * 4 / 3).unwrap_or(i64::MAX);
-        Some(Self { offset_ns, rates, uncertainty_ns: spread.max(LEAST_UNCERTAINTY_NS) })
+        let mut statement = connection
+            .prepare_cached("SELECT sample, utc_ns, monotonic_ns FROM clock WHERE run = ? ORDER BY sample")?;
+        let mut fit = Fit::default();
+        let mut rows = statement.query([run])?;
+        while let Some(row) = rows.next()? {
+            let sample = u64::try_from(row.get::<_, i64>(0)?).unwrap_or(0);
+            let elapsed_ns = rates.elapsed_ns(sample);
+            fit.take(Arrived { sample, elapsed_ns, utc_ns: row.get(1)?, monotonic_ns: row.get(2)? });
+        }
+        let pieces = fit.finish();
+        Ok((!pieces.is_empty()).then_some(Self { rates, pieces }))
     }
 
     /// When `sample` was taken.
     pub fn at(&self, sample: u64) -> Instant {
-        let utc_ns = self.offset_ns + self.rates.elapsed_ns(sample);
-        let utc_ns = i64::try_from(utc_ns).unwrap_or(i64::MAX);
-        Instant { utc_ns, uncertainty_ns: self.uncertainty_ns }
+        let after = self.pieces.partition_point(|piece| piece.from_sample <= sample);
+        let Some(piece) = self.pieces.get(after.saturating_sub(1)) else {
+            return Instant { utc_ns: 0, uncertainty_ns: i64::MAX };
+        };
+        let elapsed_ns = self.rates.elapsed_ns(sample);
+        let utc_ns = i64::try_from(elapsed_ns + piece.offset_ns(elapsed_ns)).unwrap_or(i64::MAX);
+        Instant { utc_ns, uncertainty_ns: piece.uncertainty_ns }
+    }
+}
+
+impl Piece {
+    /// `utc - elapsed`.
+    fn offset_ns(&self, elapsed_ns: i128) -> i128 {
+        self.base_ns + self.line.at((elapsed_ns - self.origin_ns) as f64) as i128
+    }
+}
+
+/// Fits arrivals one after another; holds those of one window.
+#[derive(Default)]
+struct Fit {
+    pieces: Vec<Piece>,
+    /// Arrivals of the stretch that the next window may need.
+    window: Vec<Arrived>,
+    /// Piece with which the present stretch begins, and the last window's middle.
+    stretch: usize,
+    middle_ns: i128,
+}
+
+impl Fit {
+    fn take(&mut self, arrived: Arrived) {
+        if let Some(last) = self.window.last() {
+            let apart = |arrived: &Arrived| arrived.utc_ns.saturating_sub(arrived.monotonic_ns);
+            if apart(&arrived).saturating_sub(apart(last)).saturating_abs() > STEP_NS {
+                self.end_stretch();
+            }
+        }
+        self.window.push(arrived);
+        let begin_ns = self.window.first().map_or(0, |first| first.elapsed_ns);
+        if arrived.elapsed_ns - begin_ns >= WINDOW_NS {
+            self.add_window();
+            self.window.retain(|arrived| arrived.elapsed_ns >= begin_ns + WINDOW_NS / 2);
+        }
+    }
+
+    fn finish(mut self) -> Vec<Piece> {
+        self.end_stretch();
+        self.pieces
+    }
+
+    /// What is left makes the last window; another stretch follows.
+    fn end_stretch(&mut self) {
+        self.add_window();
+        self.window.clear();
+        self.settle_uncertainties();
+        self.stretch = self.pieces.len();
+    }
+
+    fn add_window(&mut self) {
+        let (Some(first), Some(last)) = (self.window.first(), self.window.last()) else { return };
+        let span_ns = last.elapsed_ns - first.elapsed_ns;
+        let middle_ns = first.elapsed_ns + span_ns / 2;
+        let is_first = self.pieces.len() == self.stretch;
+        let (base_ns, origin_ns) = (i128::from(first.utc_ns) - first.elapsed_ns, first.elapsed_ns);
+        let line = if span_ns >= SHORT_NS && self.window.len() >= FEW {
+            let height = |one: &Arrived| (i128::from(one.utc_ns) - one.elapsed_ns - base_ns) as f64;
+            let points: Vec<(f64, f64)> =
+                self.window.iter().map(|one| ((one.elapsed_ns - origin_ns) as f64, height(one))).collect();
+            envelope::below(&points).filter(|line| line.slope.abs() <= STEEPEST)
+        } else {
+            None
+        };
+        let from_ns = if is_first { i128::MIN } else { (self.middle_ns + middle_ns) / 2 };
+        let from = self.window.iter().find(|one| one.elapsed_ns >= from_ns).unwrap_or(last);
+        match line {
+            Some(line) => {
+                let uncertainty_ns = LEAST_UNCERTAINTY_NS;
+                let from_sample = from.sample;
+                self.pieces.push(Piece { from_sample, base_ns, origin_ns, line, uncertainty_ns });
+            }
+            // What follows the last window of a stretch is close enough to it.
+            None if !is_first => return,
+            None => self.pieces.push(anchored(&self.window, from.sample)),
+        }
+        self.middle_ns = middle_ns;
+    }
+
+    /// Adds to the pieces of the stretch how far they disagree where one takes over from the other.
+    fn settle_uncertainties(&mut self) {
+        let Some(pieces) = self.pieces.get_mut(self.stretch..) else { return };
+        for number in 1..pieces.len() {
+            let Some([before, after]) = pieces.get_mut(number - 1..=number) else { return };
+            let at_ns = after.origin_ns;
+            let apart_ns = (before.offset_ns(at_ns) - after.offset_ns(at_ns)).abs();
+            let with = LEAST_UNCERTAINTY_NS.saturating_add(i64::try_from(apart_ns).unwrap_or(i64::MAX));
+            before.uncertainty_ns = before.uncertainty_ns.max(with);
+            after.uncertainty_ns = after.uncertainty_ns.max(with);
+        }
+    }
+}
+
+/// The nominal rate through the least delayed of a few arrivals.
+fn anchored(arrivals: &[Arrived], from_sample: u64) -> Piece {
+    let offset = |one: &Arrived| i128::from(one.utc_ns) - one.elapsed_ns;
+    let least = |arrivals: &[Arrived]| arrivals.iter().map(offset).min().unwrap_or(0);
+    let quarter = arrivals.len().div_ceil(4);
+    let first = least(arrivals.get(..quarter).unwrap_or(arrivals));
+    let last = least(arrivals.get(arrivals.len() - quarter..).unwrap_or(arrivals));
+    let spread_ns = i64::try_from((first - last).abs() * 4 / 3).unwrap_or(i64::MAX);
+    Piece {
+        from_sample,
+        base_ns: least(arrivals),
+        origin_ns: 0,
+        line: Line { intercept: 0.0, slope: 0.0 },
+        uncertainty_ns: spread_ns.max(LEAST_UNCERTAINTY_NS),
     }
 }
 
@@ -79,61 +221,4 @@ pub fn rfc3339(utc_ns: i64) -> String {
 }
 
 #[cfg(test)]
-mod tests {
-    use super::*;
-
-    const NOON_NS: i64 = 1_700_000_000_000_000_000;
-    fn rates() -> Rates {
-        Rates::new(500_000_000, [])
-    }
-
-    /// Offsets of an arrival per second, delayed by 0.2 ms plus a saw-tooth of up to 16 ms (a serial
-    /// bridge's latency timer), on a crystal that is `ppm` slow.
-    fn offsets(seconds: i64, ppm: f64) -> Vec<i128> {
-        let delay_ns = |second: i64| 200_000 + second * 7 % 16 * 1_000_000;
-        let drift_ns = |second: i64| (second as f64 * ppm * 1000.0) as i64;
-        (0..seconds).map(|second| i128::from(NOON_NS + delay_ns(second) + drift_ns(second))).collect()
-    }
-
-    #[test]
-    fn the_least_delayed_arrival_anchors_the_run() {
-        let clock = RunClock::fit(&offsets(3600, 0.0), rates()).unwrap();
-        // One hour at 500 kS/s.
-        let instant = clock.at(1_800_000_000);
-        assert_eq!(instant.utc_ns, NOON_NS + 3_600_000_000_000 + 200_000);
-        assert_eq!(instant.uncertainty_ns, LEAST_UNCERTAINTY_NS);
-    }
-
-    #[test]
-    fn a_slow_crystal_shows_as_uncertainty_that_holds_the_truth() {
-        for ppm in [-50.0, 50.0] {
-            let clock = RunClock::fit(&offsets(28_800, ppm), rates()).unwrap();
-            let mut worst_ns = 0;
-            for half_hour in 0..16_i64 {
-                let second = half_hour * 1800 + 1799;
-                let instant = clock.at(second as u64 * 500_000);
-                let truth_ns = NOON_NS + second * 1_000_000_000 + (second as f64 * ppm * 1000.0) as i64;
-                worst_ns = worst_ns.max((instant.utc_ns - truth_ns).abs());
-            }
-            println!("{ppm} ppm: worst error {worst_ns} ns, claimed {} ns", clock.uncertainty_ns);
-            // 50 ppm of 8 h are 1.44 s; the saw-tooth adds at most a few seconds' worth of drift.
-            assert!(worst_ns > 1_200_000_000);
-            assert!(worst_ns <= clock.uncertainty_ns);
-            assert!(clock.uncertainty_ns < 1_450_000_000);
-        }
-    }
-
-    #[test]
-    fn one_pair_is_enough_and_none_is_no_clock() {
-        assert_eq!(RunClock::fit(&[], rates()), None);
-        assert_eq!(RunClock::fit(&[5], rates()).map(|clock| clock.at(500_000).utc_ns), Some(1_000_000_005));
-    }
-
-    #[test]
-    fn instants_are_written_to_the_microsecond() {
-        // 1 700 000 000 s after the epoch is 2023-11-14T22:13:20Z (POSIX time, arithmetic).
-        assert_eq!(rfc3339(NOON_NS + 123_456_789), "2023-11-14T22:13:20.123456Z");
-        assert_eq!(rfc3339(0), "1970-01-01T00:00:00.000000Z");
-        assert!(rfc3339(i64::MAX).starts_with("2262-04-11T23:47:16"));
-    }
-}
+mod tests;
