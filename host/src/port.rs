@@ -52,10 +52,7 @@ pub enum PortError {
         reason: String,
     },
     /// The port went away.
-    #[error(
-        "could not read from {port} any more: {reason}; everything received is stored; check the cable and start \
-         'legwise log' again with a new file"
-    )]
+    #[error("could not read from {port} any more: {reason}; everything received is stored; check the cable")]
     Lost {
         /// The port.
         port: String,
@@ -125,8 +122,59 @@ impl BoardPort {
         }
     }
 
+    /// Opens a port that went away: the one that `identity` is behind now, under whatever name; without an
+    /// identity the one of the same name.
+    ///
+    /// # Errors
+    /// When it is not there, or may not be opened.
+    pub fn reopen(name: &str, identity: Option<&UsbIdentity>, baud: u32) -> Result<Self, PortError> {
+        match identity {
+            // The name may belong to another device by now.
+            Some(identity) => {
+                let port = identity.port_now().ok_or_else(|| PortError::Missing { port: name.to_owned() })?;
+                Self::open(&port, baud)
+            }
+            None => Self::open(name, baud),
+        }
+    }
+
+    /// Name the port was opened by.
+    pub fn name(&self) -> &str {
+        &self.name
+    }
+
     fn lost(&self, reason: &str) -> PortError {
         PortError::Lost { port: self.name.clone(), reason: reason.to_owned() }
+    }
+}
+
+/// What a USB device says of itself, by which it is found again under another port's name.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct UsbIdentity {
+    vendor: u16,
+    product: u16,
+    serial: String,
+}
+
+impl UsbIdentity {
+    /// That of the device behind `port`; `None` for other ports, and for devices without a serial number.
+    pub fn of(port: &str) -> Option<Self> {
+        serialport::available_ports().ok()?.into_iter().find(|one| one.port_name == port).and_then(of_usb)
+    }
+
+    /// The port it is behind now.
+    fn port_now(&self) -> Option<String> {
+        let ports = serialport::available_ports().ok()?;
+        ports.into_iter().find(|port| of_usb(port.clone()).as_ref() == Some(self)).map(|port| port.port_name)
+    }
+}
+
+fn of_usb(port: serialport::SerialPortInfo) -> Option<UsbIdentity> {
+    match port.port_type {
+        SerialPortType::UsbPort(usb) => {
+            usb.serial_number.map(|serial| UsbIdentity { vendor: usb.vid, product: usb.pid, serial })
+        }
+        _ => None,
     }
 }
 

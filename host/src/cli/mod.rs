@@ -6,6 +6,7 @@ mod analyse;
 mod calibration;
 mod demo;
 pub mod failure;
+mod length;
 mod live;
 mod night;
 mod plot;
@@ -56,7 +57,7 @@ enum Command {
     Demo(DemoArguments),
     /// List serial ports that may have a board on them
     Ports(JsonFlag),
-    /// Log a board on a serial port until Ctrl-C
+    /// Log a board on a serial port until Ctrl-C or a given time
     Log(LogArguments),
     /// Say what a log holds: verdict, margins, excursions, levels, lines
     Report(ReportArguments),
@@ -136,6 +137,8 @@ struct LogArguments {
     point: Option<String>,
     #[command(flatten)]
     watching: WatchingArguments,
+    #[command(flatten)]
+    length: length::LengthArguments,
     /// Log file to write [default: legwise-DATE-TIME.lwlog]
     #[arg(short, long, value_name = "FILE")]
     output: Option<PathBuf>,

@@ -1,15 +1,18 @@
-//! `log`: a board on a serial port into a log file, until Ctrl-C.
+//! `log`: a board on a serial port into a log file, until Ctrl-C or a given time. A plug that is pulled is
+//! waited for.
 
 use super::failure::Exit;
 use super::live::LiveView;
 use super::{LogArguments, stream, terminal};
 use crate::log::{Arrival, Log, LogError, Origin};
-use crate::port::BoardPort;
-use crate::report::{Options, Report};
+use crate::port::{BoardPort, PortError, UsbIdentity};
+use crate::report::{Options, Report, figures};
 use crate::session::Session;
 use crate::watching::Watching;
 use anyhow::Context;
 use indicatif::ProgressBar;
+use jiff::tz::TimeZone;
+use jiff::{Timestamp, ZonedDateTime};
 use legwise_protocol::command::Command;
 use legwise_protocol::framing::DeviceFrame;
 use legwise_protocol::message::{Hello, Message, Outcome, Reply};
@@ -20,11 +23,14 @@ use std::time::{Duration, Instant};
 
 /// How often a silent board is asked who it is.
 const ASK_AGAIN: Duration = Duration::from_secs(1);
+/// How often a port that went away is looked for.
+const LOOK_AGAIN: Duration = Duration::from_millis(500);
 /// How long a stopped board may take to finish its last words.
 const LAST_WORDS: Duration = Duration::from_secs(2);
 
 pub(super) fn run(arguments: &LogArguments) -> anyhow::Result<Exit> {
     let watching = arguments.watching.choose(None)?;
+    let end = arguments.length.end(&ZonedDateTime::now())?;
     let path = arguments.output.clone().unwrap_or_else(default_path);
     // Before anything is opened: from here on Ctrl-C ends cleanly.
     let stop = Arc::new(AtomicBool::new(false));
@@ -32,16 +38,26 @@ pub(super) fn run(arguments: &LogArguments) -> anyhow::Result<Exit> {
     ctrlc::set_handler(move || flag.store(true, Ordering::SeqCst))
         .context("could not catch Ctrl-C; try again")?;
     let port = BoardPort::open(&arguments.port, arguments.baud)?;
+    let plug = Plug { identity: UsbIdentity::of(&arguments.port), baud: arguments.baud };
     let about = stream::about(Origin::Serial, &arguments.port, arguments.point.as_deref());
     let log = Log::create(&path, &about)?;
 
-    terminal::print(&format!("logging {} into {}; Ctrl-C ends it", arguments.port, path.display()))?;
+    let until = end
+        .map(|end| format!(" at {}", end.to_zoned_datetime(TimeZone::system()).strftime("%Y-%m-%d %H:%M")));
+    let until = until.as_deref().unwrap_or_default();
+    terminal::print(&format!(
+        "logging {} into {}; it ends{until}{}",
+        arguments.port,
+        path.display(),
+        if end.is_some() { " or at Ctrl-C" } else { " at Ctrl-C" }
+    ))?;
     if arguments.point.is_none() {
         terminal::print("no --point given: the report cannot say where the clip sat")?;
     }
     let bar = terminal::state_line();
-    let mut recorder = Recorder::new(port, Session::new(log), watching);
-    let outcome = recorder.record(&bar, &stop);
+    let mut recorder = Recorder::new((port, plug), Session::new(log), watching);
+    let is_over = || stop.load(Ordering::SeqCst) || end.is_some_and(|end| Timestamp::now() >= end);
+    let outcome = recorder.record(&bar, &is_over);
     bar.finish_and_clear();
     let was_silent = recorder.boot_id.is_none();
     let log = recorder.session.finish()?;
@@ -61,7 +77,7 @@ pub(super) fn run(arguments: &LogArguments) -> anyhow::Result<Exit> {
 }
 
 fn default_path() -> PathBuf {
-    PathBuf::from(jiff::ZonedDateTime::now().strftime("legwise-%Y%m%d-%H%M%S.lwlog").to_string())
+    PathBuf::from(ZonedDateTime::now().strftime("legwise-%Y%m%d-%H%M%S.lwlog").to_string())
 }
 
 /// The verdict in a few lines, and how to see the rest.
@@ -72,9 +88,16 @@ fn summarise(log: &Log, path: &Path, is_verdict_code: bool) -> anyhow::Result<Ex
     Ok(Exit::of_verdict(report.verdict, is_verdict_code))
 }
 
+/// How to find a port again.
+struct Plug {
+    identity: Option<UsbIdentity>,
+    baud: u32,
+}
+
 /// A port, a session and what has been said between them.
 struct Recorder {
     port: BoardPort,
+    plug: Plug,
     session: Session,
     watching: Watching,
     view: LiveView,
@@ -88,9 +111,10 @@ struct Recorder {
 }
 
 impl Recorder {
-    fn new(port: BoardPort, session: Session, watching: Watching) -> Self {
+    fn new((port, plug): (BoardPort, Plug), session: Session, watching: Watching) -> Self {
         Self {
             port,
+            plug,
             session,
             watching,
             view: LiveView::default(),
@@ -101,24 +125,85 @@ impl Recorder {
         }
     }
 
-    /// Records until `stop`, then asks the board to finish.
-    fn record(&mut self, bar: &ProgressBar, stop: &AtomicBool) -> anyhow::Result<()> {
+    /// Records until `is_over`, then asks the board to finish. A port that goes away is waited for.
+    fn record(&mut self, bar: &ProgressBar, is_over: &dyn Fn() -> bool) -> anyhow::Result<()> {
         let mut last_asked = None::<Instant>;
-        while !stop.load(Ordering::SeqCst) && !self.has_ended {
-            let is_unknown =
-                self.boot_id.is_none() && last_asked.is_none_or(|asked| asked.elapsed() >= ASK_AGAIN);
-            if is_unknown || self.session.wants_identify(now()) {
-                self.port.command(Command::Identify)?;
-                last_asked = Some(Instant::now());
+        while !is_over() && !self.has_ended {
+            match self.round(bar, &mut last_asked) {
+                Ok(()) => {}
+                Err(error) => match error.downcast::<PortError>() {
+                    Ok(lost @ PortError::Lost { .. }) => {
+                        if !self.find_again(&lost, bar, is_over)? {
+                            return Ok(());
+                        }
+                        last_asked = None;
+                    }
+                    Ok(other) => return Err(other.into()),
+                    Err(other) => return Err(other),
+                },
             }
-            self.listen(bar)?;
-            bar.set_message(if self.boot_id.is_none() {
-                "waiting for the board to introduce itself".to_owned()
-            } else {
-                self.view.state()
-            });
         }
-        self.finish(bar)
+        match self.finish(bar) {
+            // A board that goes away while it is asked to finish has said what it had to say.
+            Err(error) if error.is::<PortError>() => Ok(()),
+            outcome => outcome,
+        }
+    }
+
+    /// Asks where that is due and takes what has arrived.
+    fn round(&mut self, bar: &ProgressBar, last_asked: &mut Option<Instant>) -> anyhow::Result<()> {
+        let is_unknown =
+            self.boot_id.is_none() && last_asked.is_none_or(|asked| asked.elapsed() >= ASK_AGAIN);
+        if is_unknown || self.session.wants_identify(now()) {
+            self.port.command(Command::Identify)?;
+            *last_asked = Some(Instant::now());
+        }
+        self.listen(bar)?;
+        bar.set_message(if self.boot_id.is_none() {
+            "waiting for the board to introduce itself".to_owned()
+        } else {
+            self.view.state()
+        });
+        Ok(())
+    }
+
+    /// Waits for the port to come back, under its name or as the same device under another; `false` when the
+    /// night was over first.
+    fn find_again(
+        &mut self,
+        lost: &PortError,
+        bar: &ProgressBar,
+        is_over: &dyn Fn() -> bool,
+    ) -> anyhow::Result<bool> {
+        let name = self.port.name().to_owned();
+        let text = format!("{lost}; waiting for it to come back");
+        self.note_link(&text, bar)?;
+        let gone = Instant::now();
+        while !is_over() {
+            bar.set_message(format!("{name} is gone for {}", figures::span(gone.elapsed().as_secs_f64())));
+            std::thread::sleep(LOOK_AGAIN);
+            let Ok(port) = BoardPort::reopen(&name, self.plug.identity.as_ref(), self.plug.baud) else {
+                continue;
+            };
+            let text =
+                format!("{} is back after {}", port.name(), figures::span(gone.elapsed().as_secs_f64()));
+            self.note_link(&text, bar)?;
+            self.port = port;
+            self.session.reconnected();
+            // What the board holds it sends again when it is asked who it is.
+            if self.port.command(Command::Identify).is_ok() {
+                return Ok(true);
+            }
+        }
+        Ok(false)
+    }
+
+    /// Says what became of the link, here and in the log, and makes that and what was heard durable.
+    fn note_link(&mut self, text: &str, bar: &ProgressBar) -> anyhow::Result<()> {
+        say(bar, text);
+        let outcome = self.session.log_mut().note(now().utc_ns, "link", text);
+        let outcome = outcome.and_then(|()| self.session.flush());
+        self.note_storage(outcome, bar)
     }
 
     /// Asks for the last words and waits for them.

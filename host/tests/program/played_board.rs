@@ -46,6 +46,8 @@ pub enum Damage {
 #[derive(Clone, Debug, Default)]
 pub struct Script {
     pub rate_hz: u64,
+    /// Drawn anew at each start, by a board that is there.
+    pub boot_id: u32,
     pub leg_a: Vec<i32>,
     pub leg_b: Vec<i32>,
     pub damage: Damage,
@@ -122,8 +124,9 @@ fn run(
         requests: RequestDecoder::new(),
         damage: script.damage,
     };
+    let boot_id = script.boot_id;
     let source = HeldSource { description, script, next: 0, account: Arc::clone(account) };
-    let identity = Identity { boot_id: 4711, board: "played", serial: 9, reset_cause: ResetCause::PowerOn };
+    let identity = Identity { boot_id, board: "played", serial: 9, reset_cause: ResetCause::PowerOn };
     let settings = settings::for_receiver(&receivers::TABLE[0], description.sample_rate_mhz);
     let Ok(alarm) = AlarmPin::new(NoPin, 0);
     let memory = (Box::<Buffers>::default(), Box::<Memory<65_536, 16_384>>::default());
