@@ -10,11 +10,11 @@
 //!
 //! * Segments with 50 % overlap, mean removed, periodic Hann window: Welch, IEEE Trans. AU-15, 1967;
 //!   window figures in Harris, Proc. IEEE 66(1), 1978.
-//! * One transform for the pair, `z = A + j B`, split, turned to the same instant ([`window`]), then
+//! * One transform for the pair, `z = A + j B`, split, turned to the same instant (`window`), then
 //!   C = (A+B)/2 and D = A−B.
 //! * Result: one-sided densities in V²/Hz, `2|X|²/(fs Σw²)`, 1× at 0 Hz and at fs/2, and the cross density
 //!   `⟨conj(C)·D⟩` in the same scale. A white floor is continuous from rung to rung.
-//! * Idle and driven segments are averaged apart, in turns ([`turn`]). Idle is a segment in which DM stayed
+//! * Idle and driven segments are averaged apart, in turns (`turn`). Idle is a segment in which DM stayed
 //!   within the idle threshold of its resting level, whatever the common mode did.
 //!
 //! Windowing is the transform's first pass, adding to the sums its last: neither has a loop of its own. The

@@ -279,7 +279,7 @@ fn a_gap_costs_segments_and_invents_nothing() {
     let pairs = 1 << 17;
     for (round, level) in [(0_u64, -3_000_000), (1, 4_000_000), (2, -1_000_000)] {
         let first = round * (pairs as u64 + 12_345);
-        let leg: Vec<i32> = (0..pairs).map(|n| level + (n % 3) as i32).collect();
+        let leg: Vec<i32> = (0..pairs).map(|n| level + n % 3).collect();
         recorder.feed_at(first, &leg, &leg, GapCause::Skipped);
     }
     recorder.end();

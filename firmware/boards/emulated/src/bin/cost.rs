@@ -11,7 +11,7 @@ use cortex_m_semihosting::{debug, hprintln};
 use legwise_board_emulated::counter::Counter;
 use legwise_firmware::account::Account;
 use legwise_firmware::block::{BLOCK_PAIRS, Block};
-use legwise_firmware::fft::{BINS, COLUMNS, Complex, POINTS, transform};
+use legwise_firmware::fft::{BINS, Complex, POINTS, transform};
 use legwise_firmware::levels::LevelMeter;
 use legwise_firmware::limit_check::{LimitCheck, LimitConfig, LimitEvent};
 use legwise_firmware::outbox::Outbox;
